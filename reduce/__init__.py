@@ -1,0 +1,1 @@
+"""The inverse side: from spectra to turning points, and the command."""

@@ -1,0 +1,161 @@
+"""The command ``quietlimb``: a thin skin over the plain functions, the last file of the flow.
+
+Exit codes: 0 done; 2 the input is at fault, and nothing of the user's was touched; 1 the
+program is at fault or a fit did not converge.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Annotated, NoReturn
+
+import typer
+from rich.console import Console
+from rich.progress import BarColumn, MofNCompleteColumn, TextColumn, TimeRemainingColumn
+from rich.progress import Progress as Bars
+
+from sims.errors import InputError
+
+EXIT_INPUT = 2
+EXIT_FAILED = 1
+
+app = typer.Typer(
+    add_completion=False,
+    no_args_is_help=True,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    help=(
+        "From radiometer spectra of the low-frequency sky to the turning points of the cosmic-dawn trough.\n\n"
+        "Begin with `quietlimb new DIR`, look at what it wrote, `quietlimb check DIR/campaign.toml`, then "
+        "`quietlimb run DIR/campaign.toml --out DIR/out`.\n\n"
+        "Exit codes: 0 done; 2 bad input, nothing was overwritten; 1 anything else."
+    ),
+)
+
+ConfigFile = Annotated[Path, typer.Argument(metavar="CONFIG", help="Configuration, TOML.", show_default=False)]
+OutFolder = Annotated[
+    Path, typer.Option("--out", metavar="DIR", help="Folder for everything made.", show_default=False)
+]
+Update = Annotated[
+    bool,
+    typer.Option(
+        "--update",
+        help="DIR holds products of a changed configuration: redo what the change touches and replace it.",
+    ),
+]
+
+
+@app.command()
+def run(config: ConfigFile, out: OutFolder, update: Update = False) -> None:
+    """Observe a mock campaign and reduce it to turning points.
+
+    Writes spectra.nc, truth.nc, bundle.nc, posterior.nc, turning_points.json,
+    combined_spectrum.txt, five plots, summary.txt, run.json and log.txt. Run again, it
+    reuses what still holds; a folder of another configuration is refused without --update.
+    """
+    from reduce.pipeline import run as run_campaign  # noqa: PLC0415
+
+    with _complaints(), _bars() as progress:
+        outcome = run_campaign(config, out, update=update, progress=progress)
+    _closing(outcome.summary, outcome.folder, outcome.redone, outcome.reused)
+
+
+@app.command()
+def fit(
+    spectra: Annotated[
+        Path,
+        typer.Argument(
+            metavar="SPECTRA",
+            help="Spectra: NetCDF, or CSV with frequency_mhz, temperature_k, sigma_k and optionally bin, w, width_mhz.",
+            show_default=False,
+        ),
+    ],
+    config: ConfigFile,
+    out: OutFolder,
+    covariance: Annotated[
+        Path | None,
+        typer.Option(
+            "--covariance", metavar="FILE", help="CSV matrix, K^2: covariance of all rows of a CSV table, for sigma_k."
+        ),
+    ] = None,
+    update: Update = False,
+) -> None:
+    """Find the turning points in spectra that somebody measured.
+
+    CONFIG needs [run], [foreground] and [turning_points] only. Writes what `run` does,
+    but for spectra and truth.
+    """
+    from reduce.pipeline import fit as fit_spectra  # noqa: PLC0415
+
+    with _complaints(), _bars() as progress:
+        outcome = fit_spectra(spectra, config, out, covariance_path=covariance, update=update, progress=progress)
+    _closing(outcome.summary, outcome.folder, outcome.redone, outcome.reused)
+
+
+@app.command()
+def check(config: ConfigFile) -> None:
+    """Judge a configuration: all its errors, or what a run of it would be like.
+
+    Prints every value as resolved, the geometry, the noise to expect, time and memory.
+    Writes nothing.
+    """
+    from reduce.preview import preview  # noqa: PLC0415
+
+    with _complaints():
+        typer.echo(preview(config))
+
+
+@app.command()
+def new(
+    folder: Annotated[Path, typer.Argument(metavar="DIR", help="Folder to begin in.", show_default=False)],
+) -> None:
+    """Write a commented starter configuration to DIR/campaign.toml."""
+    from reduce.starter import new as write_starter  # noqa: PLC0415
+
+    with _complaints():
+        path = write_starter(folder)
+    typer.echo(f"wrote {path}\nnext: quietlimb check {path}")
+
+
+def main() -> NoReturn:
+    """Entry point of the installed command."""
+    app()
+    raise SystemExit(0)
+
+
+@contextmanager
+def _complaints() -> Iterator[None]:
+    """Bad input as plain lines and exit code 2; a fit without convergence as one line and 1."""
+    try:
+        yield
+    except InputError as error:
+        count = len(error.problems)
+        typer.echo(f"quietlimb: {count} problem{'s' if count > 1 else ''}", err=True)
+        for problem in error.problems:
+            typer.echo(f"  {problem}", err=True)
+        raise typer.Exit(EXIT_INPUT) from None
+    except RuntimeError as error:
+        typer.echo(f"quietlimb: {error}", err=True)
+        raise typer.Exit(EXIT_FAILED) from None
+
+
+@contextmanager
+def _bars():  # type: ignore[no-untyped-def]
+    """Progress bars on standard error, one a long step."""
+    columns = (TextColumn("{task.description:28}"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
+    with Bars(*columns, console=Console(stderr=True)) as bars:
+
+        @contextmanager
+        def bar(title: str, total: int):  # type: ignore[no-untyped-def]
+            task = bars.add_task(title, total=total)
+            yield lambda done: bars.advance(task, done)
+            bars.update(task, completed=total)
+
+        yield bar
+
+
+def _closing(summary: str, folder: Path, redone: tuple[str, ...], reused: tuple[str, ...]) -> None:
+    typer.echo(summary)
+    typer.echo(f"redone: {', '.join(redone) or 'nothing'}; reused: {', '.join(reused) or 'nothing'}; all in {folder}")

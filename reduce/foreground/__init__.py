@@ -1,0 +1,1 @@
+"""Foreground families: one short file each, all answering to `protocol.Family`."""

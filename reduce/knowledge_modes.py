@@ -1,0 +1,130 @@
+"""What ``[knowledge]`` says of single numbers, as modes of the data's covariance.
+
+Each leaf is moved up and down by its standard deviation and the campaign is simulated
+again, without noise, on a thinned set of samples. The slope of the binned spectra times the
+standard deviation is a common error of one standard deviation: a column of U in C = noise + U U'. What the
+same move does to the signal response goes with it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+import xarray as xr
+from numpy.typing import NDArray
+
+from reduce.binning import bin_of_each_sample, mean_by_bin
+from sims.campaign import geometry_like, simulate
+from sims.config import Config
+from sims.draws import leaf_value, with_leaves
+from sims.errors import InputError
+from sims.frequency import ChannelGrid, channel_grid
+from sims.receiver import gain, received_k
+from sims.sky import sky_from
+from sims.sky_average import SkyAverage
+from sims.vantage import survey_geometry
+
+FloatArray = NDArray[np.float64]
+
+SAMPLES_PER_BIN = 8
+ENGINE_SECTIONS = ("sky", "beam", "vantage", "surface")
+
+
+@dataclass(frozen=True)
+class KnowledgeModes:
+    """Modes of the covariance.
+
+    Attributes
+    ----------
+    names : tuple of str
+        Path of the leaf behind each mode.
+    temperature_k : ndarray[mode, bin, channel]
+        Error of one standard deviation, K.
+    response : ndarray[mode, bin, channel]
+        Change of the signal response that goes with it.
+    """
+
+    names: tuple[str, ...]
+    temperature_k: FloatArray
+    response: FloatArray
+
+
+def engine_runs(config: Config) -> int:
+    """How many thinned engine runs the modes take: two a leaf outside the receiver, and the nominal one."""
+    return 1 + 2 * sum(leaf.path.split(".")[0] in ENGINE_SECTIONS for leaf in config.knowledge.leaves)
+
+
+def thinned(geometry: xr.Dataset, config: Config) -> xr.Dataset:
+    """Up to `SAMPLES_PER_BIN` samples of each bin, evenly spread."""
+    label = bin_of_each_sample(geometry, config.bins)
+    rows = [np.flatnonzero(label == number) for number in range(config.bins.count)]
+    kept = [row[np.unique(np.linspace(0, len(row) - 1, SAMPLES_PER_BIN).astype(int))] for row in rows if len(row)]
+    return geometry.isel(time=np.sort(np.concatenate(kept)))
+
+
+def knowledge_modes(config: Config, advance: Callable[[int], None]) -> KnowledgeModes:
+    """Modes for every leaf of ``[knowledge]``.
+
+    Parameters
+    ----------
+    config : Config
+        Nominal configuration.
+    advance : callable
+        Told the number of engine runs done; `engine_runs` in all.
+
+    Returns
+    -------
+    KnowledgeModes
+        In the order of the table. Leaves outside the forward model have no mode.
+    """
+    geometry = thinned(survey_geometry(config.vantage, config.observation), config)
+    grid = channel_grid(config.channels)
+    sky = sky_from(config.sky)
+    nominal = simulate(config, sky, geometry, grid, _quiet)
+    advance(1)
+    names, temperatures, responses = [], [], []
+    for leaf in config.knowledge.leaves:
+        value = leaf_value(config, leaf.path)
+        sd = float(leaf.frozen(value).std())
+        pair, reached = [], []
+        for sign in (-1.0, 1.0):
+            moved = _moved(config, leaf.path, value, sign * sd)
+            reached.append(leaf_value(moved, leaf.path))
+            average = nominal
+            if leaf.path.split(".")[0] in ENGINE_SECTIONS:
+                moved_sky = sky if moved.sky == config.sky else sky_from(moved.sky)
+                average = simulate(moved, moved_sky, geometry_like(moved, geometry, config), grid, _quiet)
+                advance(1)
+            pair.append(_binned(moved, average, geometry, grid))
+        (low_k, low_w), (high_k, high_w) = pair
+        names.append(leaf.path)
+        temperatures.append((high_k - low_k) * sd / (reached[1] - reached[0]))
+        responses.append((high_w - low_w) * sd / (reached[1] - reached[0]))
+    shape = (0, config.bins.count, grid.count)
+    return KnowledgeModes(
+        names=tuple(names),
+        temperature_k=np.stack(temperatures) if names else np.zeros(shape),
+        response=np.stack(responses) if names else np.zeros(shape),
+    )
+
+
+def _moved(config: Config, path: str, value: float, step: float) -> Config:
+    """The configuration with a leaf moved; not at all where what it allows ends before the step does."""
+    try:
+        return with_leaves(config, {path: value + step})
+    except InputError:
+        return config
+
+
+def _binned(
+    config: Config, average: SkyAverage, geometry: xr.Dataset, grid: ChannelGrid
+) -> tuple[FloatArray, FloatArray]:
+    received = received_k(average.antenna_temperature_k, grid.centre_mhz, config.receiver)
+    response = average.signal_response * gain(grid.centre_mhz, config.receiver)
+    return mean_by_bin(received, geometry, config.bins), mean_by_bin(response, geometry, config.bins)
+
+
+def _quiet(samples: int) -> None:
+    """The bar of the modes counts engine runs, not samples."""

@@ -1,0 +1,239 @@
+"""The stages, in order, as a table of contents; `run` and `fit` for the command and for Python.
+
+Each stage is a plain function from products and frozen settings to products. What is timed,
+kept, reused and written lies with `reduce.runner`. No stage but the mock campaign that makes
+the truth, and the plots that draw it beside the result, is ever given it.
+"""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+import xarray as xr
+
+from reduce.binning import bin_recording, mean_by_bin
+from reduce.handoff import bundle, combined_spectrum_text, information_from
+from reduce.joint_fit import joint_fit
+from reduce.knowledge_modes import engine_runs, knowledge_modes
+from reduce.report.plots import plots
+from reduce.report.summary import summary
+from reduce.runner import Made, Outcome, Products, Progress, Stage, Tools, run_stages
+from reduce.spectra import read_spectra
+from reduce.trough_model import TroughModel, trough_model
+from reduce.turning_points import sample_posterior, summarise
+from sims.campaign import engine_passes, observe
+from sims.config import FORWARD_SECTIONS, Config, FitConfig
+from sims.config_load import load_config, load_fit_config
+from sims.products import sha256_of
+from sims.schema import SPECTRA, TRUTH, describe
+from sims.streams import stream
+from sims.vantage import survey_geometry
+
+
+def observe_campaign(products: Products, config: FitConfig, tools: Tools) -> Made:
+    """Mock campaign -> binned spectra with their covariance, and the truth apart."""
+    assert isinstance(config, Config)
+    samples = survey_geometry(config.vantage, config.observation).sizes["time"]
+    with tools.progress("sky average", samples * engine_passes(config)) as advance:
+        observed = observe(config, advance)
+    tools.note(f"{samples} samples kept of {config.observation.count}")
+    tools.note(_engine_line(observed.reached.nodes, observed.reached.error_k, observed.reached.evaluations))
+    spectra = bin_recording(observed.recording, config.bins)
+    with tools.progress("what knowledge allows", engine_runs(config)) as advance:
+        modes = knowledge_modes(config, advance)
+    if modes.names:
+        spectra = spectra.assign(
+            systematic_modes=(("mode", "bin", "channel"), modes.temperature_k),
+            response_modes=(("mode", "bin", "channel"), modes.response),
+        )
+        spectra.attrs["mode_names"] = list(modes.names)
+    truth = observed.truth
+    binned = truth.drop_vars(["foreground_k", "signal_response"]).assign(
+        {
+            name: (("bin", "channel"), mean_by_bin(truth[name].values, observed.recording, config.bins))
+            for name in ("foreground_k", "signal_response")
+        }
+    )
+    return {"spectra.nc": describe(spectra, SPECTRA), "truth.nc": describe(binned, TRUTH)}
+
+
+def subtract_foreground(products: Products, config: FitConfig, tools: Tools) -> Made:
+    """Spectra -> bundle: smooth foreground out of all bins together, the rest in the information form."""
+    spectra = products.dataset("spectra.nc")
+    model = _model(spectra, config)
+    fit = joint_fit(spectra, config.foreground, model, stream(config.run.seed, "joint-fit"))
+    sub = fit.subtraction
+    tools.note(
+        f"foreground: {config.foreground.family}, {config.foreground.terms} terms a bin, {len(fit.bins)} bins; "
+        f"chi-squared {sub.chi_squared:.1f} of {sub.degrees_of_freedom}, condition number {sub.condition_number:.2g}, "
+        f"{sub.iterations} iterations"
+    )
+    return {"bundle.nc": bundle(spectra, fit)}
+
+
+def find_turning_points(products: Products, config: FitConfig, tools: Tools) -> Made:
+    """Bundle -> posterior of B, C and D."""
+    packed = products.dataset("bundle.nc")
+    model = _model(packed, config)
+    with tools.progress("sampling turning points", 4 * config.turning_points.steps) as advance:
+        posterior = sample_posterior(
+            information_from(packed), model, config.turning_points, stream(config.run.seed, "posterior"), advance
+        )
+    return {"posterior.nc": posterior.samples, "turning_points.json": summarise(posterior, model)}
+
+
+def write_spectrum(products: Products, config: FitConfig, tools: Tools) -> Made:
+    """Bundle -> the combined spectrum as plain text."""
+    return {"combined_spectrum.txt": combined_spectrum_text(products.dataset("bundle.nc"))}
+
+
+def report(products: Products, config: FitConfig, tools: Tools) -> Made:
+    """Everything -> plots and the summary."""
+    pictures = plots(products, config, _model(products.dataset("bundle.nc"), config))
+    return {**pictures, "summary.txt": summary(products, config)}
+
+
+_REDUCTION = (
+    Stage(
+        name="subtract",
+        title="subtract the foreground",
+        sections=("run", "foreground", "turning_points"),
+        needs=("spectra.nc",),
+        makes=("bundle.nc",),
+        work=subtract_foreground,
+    ),
+    Stage(
+        name="turning-points",
+        title="find the turning points",
+        sections=("run", "turning_points"),
+        needs=("bundle.nc",),
+        makes=("posterior.nc", "turning_points.json"),
+        work=find_turning_points,
+    ),
+    Stage(
+        name="spectrum",
+        title="write the combined spectrum",
+        sections=(),
+        needs=("bundle.nc",),
+        makes=("combined_spectrum.txt",),
+        work=write_spectrum,
+    ),
+)
+
+STAGES = (
+    Stage(
+        name="observe",
+        title="observe the mock campaign",
+        sections=("run", *FORWARD_SECTIONS),
+        needs=(),
+        makes=("spectra.nc", "truth.nc"),
+        work=observe_campaign,
+    ),
+    *_REDUCTION,
+    Stage(
+        name="report",
+        title="draw and sum up",
+        sections=("run", "foreground", "turning_points"),
+        needs=("spectra.nc", "truth.nc", "bundle.nc", "posterior.nc", "turning_points.json"),
+        makes=("spectra.png", "residuals.png", "trough.png", "turning_points.png", "transfer.png", "summary.txt"),
+        work=report,
+    ),
+)
+"""The whole way of a mock campaign."""
+
+FIT_STAGES = (
+    *_REDUCTION,
+    Stage(
+        name="report",
+        title="draw and sum up",
+        sections=("run", "foreground", "turning_points"),
+        needs=("spectra.nc", "bundle.nc", "posterior.nc", "turning_points.json"),
+        makes=("spectra.png", "residuals.png", "trough.png", "turning_points.png", "transfer.png", "summary.txt"),
+        work=report,
+    ),
+)
+"""The way of spectra that somebody measured."""
+
+
+def run(config_path: Path, out: Path, *, update: bool = False, progress: Progress | None = None) -> Outcome:
+    """Run a mock campaign from sky to turning points.
+
+    Parameters
+    ----------
+    config_path : Path
+        TOML configuration.
+    out : Path
+        Output folder; made if it is not there.
+    update : bool
+        Allow products of another configuration in `out` to be replaced; what the change does
+        not touch is reused.
+    progress : Progress, optional
+        Makes progress bars; none by default.
+
+    Returns
+    -------
+    Outcome
+        Folder, stages redone, and the text of the summary.
+
+    Raises
+    ------
+    InputError
+        If the configuration or the folder is not fit for it.
+    """
+    return run_stages(STAGES, load_config(config_path), out, update=update, progress=progress, given={})
+
+
+def fit(
+    spectra_path: Path,
+    config_path: Path,
+    out: Path,
+    *,
+    covariance_path: Path | None = None,
+    update: bool = False,
+    progress: Progress | None = None,
+) -> Outcome:
+    """Fit spectra that somebody measured.
+
+    Parameters
+    ----------
+    spectra_path : Path
+        NetCDF or CSV; see `reduce.spectra.read_spectra`.
+    config_path : Path
+        TOML with at least [run], [foreground] and [turning_points].
+    out : Path
+        Output folder.
+    covariance_path : Path, optional
+        Covariance that goes with a CSV table.
+    update, progress
+        As in `run`.
+
+    Returns
+    -------
+    Outcome
+
+    Raises
+    ------
+    InputError
+        If spectra, configuration or folder are not fit for it.
+    """
+    config = load_fit_config(config_path)
+    spectra = read_spectra(spectra_path, covariance_path)
+    files = [spectra_path] + ([] if covariance_path is None else [covariance_path])
+    spectra.attrs["input_sha256"] = [sha256_of(path) for path in files]
+    return run_stages(FIT_STAGES, config, out, update=update, progress=progress, given={"spectra.nc": spectra})
+
+
+def _model(dataset: xr.Dataset, config: FitConfig) -> TroughModel:
+    return trough_model(
+        config.turning_points, np.asarray(dataset["frequency_mhz"].values), np.asarray(dataset["width_mhz"].values)
+    )
+
+
+def _engine_line(nodes: int, error_k: float, evaluations: int) -> str:
+    if nodes:
+        return f"engine: {nodes} Chebyshev nodes, {error_k * 1e6:.2g} microkelvin off them at worst"
+    return (
+        f"engine: not smooth in frequency; every channel integrated on its own, {evaluations} frequencies, "
+        f"{error_k * 1e6:.2g} microkelvin between two quadratures"
+    )

@@ -1,0 +1,234 @@
+"""Reading binned spectra: ours, or anyone's, from NetCDF or a plain CSV table.
+
+Whatever the source, what leaves here keeps to `sims.schema.SPECTRA` and is fit for the
+subtraction: frequencies rise, used values are finite, and variances are positive.
+"""
+
+from __future__ import annotations
+
+import csv
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import xarray as xr
+from numpy.typing import NDArray
+
+from sims.campaign import FLAG_EMPTY
+from sims.errors import InputError, raise_if_any
+from sims.products import read_netcdf
+from sims.schema import SPECTRA, check, describe
+
+FloatArray = NDArray[np.float64]
+COLUMNS = ("frequency_mhz", "temperature_k", "sigma_k", "bin", "w", "width_mhz")
+SIGMA_AGREEMENT = 0.01
+
+
+def read_spectra(path: Path, covariance: Path | None = None) -> xr.Dataset:
+    """Read spectra that somebody measured.
+
+    Parameters
+    ----------
+    path : Path
+        ``.nc``: a Dataset that keeps to the `spectra` product. ``.csv``: columns frequency_mhz,
+        temperature_k, sigma_k, and optionally bin (a label), w (the signal response,
+        taken as 1 where absent) and width_mhz; one row a channel of a bin.
+    covariance : Path, optional
+        CSV without header: the covariance in K^2 of all rows of the CSV table, in their
+        order. It takes the place of sigma_k.
+
+    Returns
+    -------
+    xarray.Dataset
+
+    Raises
+    ------
+    InputError
+        With every problem found, each with file, line or variable.
+    """
+    if path.suffix == ".nc":
+        if covariance is not None:
+            raise InputError(f"{covariance}: a covariance file goes with a CSV table; {path} carries its own")
+        spectra = read_netcdf(path)
+        check(spectra, SPECTRA, str(path))
+    elif path.suffix == ".csv":
+        spectra = _from_table(_read_table(path), path, covariance)
+    else:
+        raise InputError(f"{path}: ending {path.suffix!r} is not known; allowed are .nc and .csv")
+    raise_if_any([f"{path}: {problem}" for problem in spectra_problems(spectra)])
+    return spectra
+
+
+def spectra_problems(spectra: xr.Dataset) -> list[str]:
+    """What keeps spectra from being fitted: order of channels, used values that are no numbers, variances."""
+    problems = []
+    frequency = spectra["frequency_mhz"].values
+    if np.any(np.diff(frequency) <= 0.0):
+        at = int(np.argmax(np.diff(frequency) <= 0.0))
+        problems.append(f"frequency_mhz must rise; channel {at + 1} ({frequency[at + 1]} MHz) does not")
+    if np.any(frequency <= 0.0) or np.any(spectra["width_mhz"].values <= 0.0):
+        problems.append("frequency_mhz and width_mhz must be positive")
+    used = spectra["flag"].values == 0
+    if not used.any():
+        problems.append("every channel is flagged; nothing is left to fit")
+    for name in ("antenna_temperature_k", "noise_variance"):
+        bad = used & ~np.isfinite(spectra[name].values)
+        if bad.any():
+            problems.append(f"{name} is not finite in {int(bad.sum())} unflagged cells, first {_first(bad)}")
+    bad = used & ~(spectra["noise_variance"].values > 0.0)
+    if bad.any():
+        problems.append(f"noise_variance is not positive in {int(bad.sum())} unflagged cells, first {_first(bad)}")
+    response = spectra["signal_response"].values
+    if np.any(response < 0.0) or np.any(response > 1.5):
+        problems.append(f"signal_response must lie within 0 to 1.5, got {response.min():.3g} to {response.max():.3g}")
+    return problems
+
+
+def _first(where: NDArray[np.bool_]) -> str:
+    bin_number, channel = (int(index) for index in np.argwhere(where)[0])
+    return f"bin {bin_number}, channel {channel}"
+
+
+@dataclass(frozen=True)
+class _Table:
+    columns: dict[str, FloatArray]
+    labels: list[str]
+
+
+def _read_table(path: Path) -> _Table:
+    try:
+        with path.open(newline="", encoding="utf-8") as handle:
+            rows = [(number, row) for number, row in enumerate(csv.reader(handle), start=1)
+                    if row and not row[0].lstrip().startswith("#")]  # fmt: skip
+    except (OSError, UnicodeDecodeError, csv.Error) as error:
+        raise InputError(f"{path}: cannot be read as a CSV table ({error})") from None
+    if not rows:
+        raise InputError(f"{path}: holds no header line; it should name {', '.join(COLUMNS[:3])}")
+    header = [name.strip() for name in rows[0][1]]
+    problems = [f"{path}: unknown column {name!r}; allowed are {', '.join(COLUMNS)}"
+                for name in header if name not in COLUMNS]  # fmt: skip
+    problems += [f"{path}: column {name!r} stands twice" for name in sorted(set(header)) if header.count(name) > 1]
+    problems += [f"{path}: column {name!r} is missing" for name in COLUMNS[:2] if name not in header]
+    raise_if_any(problems)
+    values: dict[str, list[float]] = {name: [] for name in header if name != "bin"}
+    labels = []
+    for number, row in rows[1:]:
+        if len(row) != len(header):
+            problems.append(f"{path}: line {number} has {len(row)} cells, the header {len(header)}")
+            continue
+        for name, cell in zip(header, row, strict=True):
+            if name == "bin":
+                labels.append(cell.strip())
+                continue
+            try:
+                values[name].append(float(cell))
+            except ValueError:
+                problems.append(f"{path}: line {number}, {name}: {cell!r} is not a number")
+    if len(rows) < 2:
+        problems.append(f"{path}: holds a header but no rows")
+    raise_if_any(problems)
+    return _Table({name: np.array(column) for name, column in values.items()}, labels or ["all"] * (len(rows) - 1))
+
+
+def _from_table(table: _Table, path: Path, covariance: Path | None) -> xr.Dataset:
+    columns = table.columns
+    if "sigma_k" not in columns and covariance is None:
+        raise InputError(f"{path}: column 'sigma_k' is missing, and no covariance file is given in its place")
+    frequency = np.unique(columns["frequency_mhz"])
+    if len(frequency) < 2:
+        raise InputError(f"{path}: holds fewer than two frequencies")
+    names = list(dict.fromkeys(table.labels))
+    row_bin = np.array([names.index(label) for label in table.labels])
+    row_channel = np.searchsorted(frequency, columns["frequency_mhz"])
+    cell = row_bin * len(frequency) + row_channel
+    if len(np.unique(cell)) < len(cell):
+        twice = int(np.argmax(np.bincount(cell) > 1))
+        where = f"{frequency[twice % len(frequency)]} MHz of bin {names[twice // len(frequency)]!r}"
+        raise InputError(f"{path}: {where} stands more than once")
+    variance, modes = _noise(columns, path, covariance)
+    shape = (len(names), len(frequency))
+
+    def spread(values: FloatArray, absent: float) -> FloatArray:
+        grid = np.full((*values.shape[:-1], shape[0] * shape[1]), absent)
+        grid[..., cell] = values
+        return grid.reshape(values.shape[:-1] + shape)
+
+    rows = np.ones(len(cell))
+    widths = columns.get("width_mhz", np.gradient(frequency)[row_channel])
+    width = np.zeros(len(frequency))
+    width[row_channel] = widths
+    spectra = xr.Dataset(
+        {
+            "frequency_mhz": ("channel", frequency),
+            "width_mhz": ("channel", width),
+            "antenna_temperature_k": (("bin", "channel"), spread(columns["temperature_k"], np.nan)),
+            "noise_variance": (("bin", "channel"), spread(variance, np.nan)),
+            "signal_response": (("bin", "channel"), spread(columns.get("w", rows), 0.0)),
+            "flag": (("bin", "channel"), spread(1.0 - rows, FLAG_EMPTY).astype(np.uint8)),
+        },
+        attrs={"source": path.name, "bin_labels": names, "signal_response_given": int("w" in columns)},
+    )
+    if modes is not None:
+        spectra["systematic_modes"] = (("mode", "bin", "channel"), spread(modes, 0.0))
+    return describe(spectra, SPECTRA)
+
+
+def _noise(columns: dict[str, FloatArray], path: Path, covariance: Path | None) -> tuple[FloatArray, FloatArray | None]:
+    """Variance of each row, and what correlates the rows as modes."""
+    if covariance is None:
+        if np.any(~(columns["sigma_k"] > 0.0)):
+            raise InputError(f"{path}: sigma_k must be positive, got {columns['sigma_k'].min()}")
+        return columns["sigma_k"] ** 2, None
+    matrix = _read_covariance(covariance, len(columns["frequency_mhz"]))
+    if "sigma_k" in columns:
+        off = np.abs(np.sqrt(np.diag(matrix)) / columns["sigma_k"] - 1.0)
+        if not np.all(off < SIGMA_AGREEMENT):
+            raise InputError(
+                f"{covariance}: its diagonal and sigma_k of {path} differ by up to {np.nanmax(off):.1%}, "
+                f"allowed is {SIGMA_AGREEMENT:.0%}; leave sigma_k out where the covariance is right"
+            )
+    return diagonal_and_modes(matrix)
+
+
+def diagonal_and_modes(covariance_k2: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """A dense covariance as a diagonal and modes, without loss.
+
+    Parameters
+    ----------
+    covariance_k2 : ndarray[row, row]
+        Positive definite, K^2.
+
+    Returns
+    -------
+    variance_k2 : ndarray[row]
+        The smallest eigenvalue of the correlation times each variance, K^2.
+    modes_k : ndarray[mode, row]
+        What is left, K; modes below rounding are dropped.
+    """
+    sigma = np.sqrt(np.diag(covariance_k2))
+    values, vectors = np.linalg.eigh(covariance_k2 / np.outer(sigma, sigma))
+    excess = values - values[0]
+    kept = excess > 1e-12 * values[-1]
+    return values[0] * sigma**2, (vectors[:, kept] * np.sqrt(excess[kept]) * sigma[:, None]).T
+
+
+def _read_covariance(path: Path, rows: int) -> FloatArray:
+    try:
+        matrix = np.loadtxt(path, delimiter=",", ndmin=2)
+    except (OSError, ValueError) as error:
+        raise InputError(f"{path}: cannot be read as a matrix of numbers ({error})") from None
+    problems = []
+    if matrix.shape != (rows, rows):
+        raise InputError(f"{path}: is {matrix.shape[0]} x {matrix.shape[1]}, the table has {rows} rows")
+    if not np.all(np.isfinite(matrix)):
+        raise InputError(f"{path}: holds values that are not finite")
+    if not np.allclose(matrix, matrix.T, rtol=1e-8, atol=0.0):
+        problems.append(f"{path}: is not symmetric")
+    if np.any(np.diag(matrix) <= 0.0):
+        problems.append(f"{path}: its diagonal must be positive")
+    raise_if_any(problems)
+    sigma = np.sqrt(np.diag(matrix))
+    smallest = float(np.linalg.eigvalsh(matrix / np.outer(sigma, sigma))[0])
+    if smallest <= 1e-10:
+        raise InputError(f"{path}: is not positive definite (smallest eigenvalue of the correlation {smallest:.1e})")
+    return matrix

@@ -1,0 +1,303 @@
+"""The settings of a campaign and its reduction as frozen models, one class a table of the configuration.
+
+`sims.config_load` turns a TOML file into these; every later stage is handed the one table
+it needs. The forward tables stand in `sims.config_forward` and can be had from here.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from itertools import accumulate
+from typing import Any, Literal, Self
+
+import numpy as np
+from pydantic import Field, model_validator
+
+from sims.config_forward import (
+    Beam,
+    Bins,
+    Boresight,
+    Channels,
+    Dipole,
+    FixedBoresight,
+    FlattenedGaussianSignal,
+    GaussianBeam,
+    GroundSite,
+    HealpixSky,
+    ImageSky,
+    InventedSky,
+    LunarOrbit,
+    NoSignal,
+    Observation,
+    Point,
+    Receiver,
+    ShortDipole,
+    Signal,
+    Sky,
+    Surface,
+    TableSignal,
+    TurningPointSignal,
+    Vantage,
+    VerticalBoresight,
+)
+from sims.knowledge import Knowledge
+from sims.quantities import Kelvin, MhzRange, MillikelvinRange, Section
+
+__all__ = [
+    "FORWARD_SECTIONS",
+    "Beam",
+    "Bins",
+    "Boresight",
+    "Channels",
+    "Config",
+    "Dipole",
+    "Engine",
+    "FitConfig",
+    "FixedBoresight",
+    "FlattenedGaussianSignal",
+    "Foreground",
+    "GaussianBeam",
+    "GroundSite",
+    "HealpixSky",
+    "ImageSky",
+    "InventedSky",
+    "LunarOrbit",
+    "NoSignal",
+    "Observation",
+    "Point",
+    "PointPrior",
+    "Receiver",
+    "Run",
+    "ShortDipole",
+    "Signal",
+    "Sky",
+    "Surface",
+    "TableSignal",
+    "TurningPointSignal",
+    "TurningPoints",
+    "Vantage",
+    "VerticalBoresight",
+    "cross_problems",
+]
+
+
+class Run(Section):
+    """``[run]``: the name on every product, the one seed, and where a mock's truth comes from."""
+
+    name: str = Field(min_length=1)
+    seed: int = Field(ge=0)
+    truth: Literal["nominal", "drawn"] = "nominal"
+
+
+class Foreground(Section):
+    """``[foreground]``: the smooth family taken away from each bin, and how many terms of it."""
+
+    family: Literal["log-polynomial", "power-series"]
+    terms: int = Field(ge=1, le=20)
+    index: float = Field(default=2.5, ge=1.0, le=4.0)
+
+
+class PointPrior(Section):
+    """Bounds of a turning point: uniform within them."""
+
+    frequency_mhz: MhzRange
+    temperature_mk: MillikelvinRange
+
+    @model_validator(mode="after")
+    def _rising(self) -> Self:
+        for name, bounds in (("frequency", self.frequency_mhz), ("temperature", self.temperature_mk)):
+            if bounds[1] <= bounds[0]:
+                raise ValueError(f"{name} must rise from lower to upper bound, got {list(bounds)}")
+        if self.frequency_mhz[0] <= 0:
+            raise ValueError(f"frequency must be positive, got {list(self.frequency_mhz)} MHz")
+        return self
+
+
+class TurningPoints(Section):
+    """``[turning_points]``: fixed ends A and E, priors of B, C and D, and the sampler's effort."""
+
+    a: Point
+    e: Point
+    b: PointPrior
+    c: PointPrior
+    d: PointPrior
+    walkers: int = Field(default=160, ge=64, le=4096)
+    steps: int = Field(default=1600, ge=100, le=1_000_000)
+
+    @model_validator(mode="after")
+    def _room(self) -> Self:
+        lower = [self.a.frequency_mhz, *(point.frequency_mhz[0] for point in (self.b, self.c, self.d))]
+        upper = [*(point.frequency_mhz[1] for point in (self.b, self.c, self.d)), self.e.frequency_mhz]
+        problems = []
+        if self.b.frequency_mhz[0] < self.a.frequency_mhz:
+            problems.append("b must start above a")
+        if self.d.frequency_mhz[1] > self.e.frequency_mhz:
+            problems.append("d must end below e")
+        if any(low >= high for low, high in zip(accumulate(lower, max), upper, strict=True)):
+            problems.append("the ranges leave no room for a < b < c < d < e in frequency")
+        if self.c.temperature_mk[0] >= min(self.b.temperature_mk[1], self.d.temperature_mk[1]):
+            problems.append("the ranges leave no room for c below b and d in temperature")
+        if self.walkers % 8:
+            problems.append(f"walkers must be a multiple of 8 (four ensembles of an even number), got {self.walkers}")
+        if problems:
+            raise ValueError("; ".join(problems))
+        return self
+
+
+class Engine(Section):
+    """``[engine]``: how the sky average is expanded in frequency and checked."""
+
+    nodes: int = Field(default=20, ge=4, le=64)
+    nodes_cap: int = Field(default=64, ge=4, le=256)
+    tolerance_k: Kelvin = Field(default=1e-6, gt=0)
+    check_frequencies: int = Field(default=7, ge=1, le=64)
+    check_samples: int = Field(default=16, ge=1, le=4096)
+
+    @model_validator(mode="after")
+    def _cap(self) -> Self:
+        if self.nodes_cap < self.nodes:
+            raise ValueError(f"nodes_cap ({self.nodes_cap}) must not lie below nodes ({self.nodes})")
+        return self
+
+
+class FitConfig(Section):
+    """What ``quietlimb fit`` needs: the reduction alone."""
+
+    run: Run
+    foreground: Foreground
+    turning_points: TurningPoints
+
+
+class Config(FitConfig):
+    """A whole campaign, from sky to turning points."""
+
+    channels: Channels
+    sky: Sky
+    beam: Beam
+    vantage: Vantage
+    surface: Surface
+    observation: Observation
+    receiver: Receiver
+    signal: Signal
+    bins: Bins
+    engine: Engine = Engine()
+    knowledge: Knowledge = Knowledge()
+
+    @model_validator(mode="after")
+    def _belong_together(self) -> Self:
+        problems = cross_problems({name: getattr(self, name) for name in type(self).model_fields})
+        if problems:
+            raise ValueError("; ".join(problems))
+        return self
+
+
+FORWARD_SECTIONS = tuple(name for name in Config.model_fields if name not in FitConfig.model_fields)
+
+
+def cross_problems(sections: Mapping[str, Any]) -> list[str]:
+    """What is wrong between sections, as far as those given can tell.
+
+    Parameters
+    ----------
+    sections : mapping of str to Section
+        The sections that are sound in themselves; absent ones are not judged.
+
+    Returns
+    -------
+    list of str
+        One line a problem, with the configuration paths that clash.
+    """
+    given = {name: section for name, section in sections.items() if section is not None}
+    problems: list[str] = []
+    for names, judge in _JUDGES:
+        if all(name in given for name in names):
+            problems += judge(*(given[name] for name in names))
+    return problems
+
+
+def _bins_and_vantage(bins: Bins, vantage: LunarOrbit | GroundSite) -> list[str]:
+    needs = {
+        "pointing": ("vantage.boresight.kind", vantage.boresight.kind, "fixed"),
+        "orbit-phase": ("vantage.kind", vantage.kind, "lunar-orbit"),
+        "sidereal-time": ("vantage.kind", vantage.kind, "ground"),
+    }
+    problems = []
+    where, got, wanted = needs.get(bins.by, ("", "", ""))
+    if got != wanted:
+        problems.append(f'bins.by = "{bins.by}" needs {where} = "{wanted}", got "{got}"')
+    count = {"all": 1}.get(bins.by, bins.count)
+    if bins.by == "pointing" and vantage.boresight.kind == "fixed":
+        count = len(vantage.boresight.directions_deg)
+    if bins.count != count:
+        problems.append(f'bins.count must be {count} here, with bins.by = "{bins.by}" (got {bins.count})')
+    return problems
+
+
+def _observation_and_vantage(observation: Observation, vantage: LunarOrbit | GroundSite) -> list[str]:
+    if "earth-hidden" in observation.require and vantage.kind == "ground":
+        return ['observation.require: "earth-hidden" cannot be met by vantage.kind = "ground"']
+    return []
+
+
+def _channels_and_sky(channels: Channels, sky: InventedSky | HealpixSky | ImageSky) -> list[str]:
+    if sky.valid_from_mhz <= channels.start_mhz and channels.stop_mhz <= sky.valid_to_mhz:
+        return []
+    return [
+        f"channels.start to channels.stop, {channels.start_mhz} to {channels.stop_mhz} MHz, reach outside sky.valid_from "
+        f"to sky.valid_to, {sky.valid_from_mhz} to {sky.valid_to_mhz} MHz: no map is extrapolated silently"
+    ]
+
+
+def _channels_and_turning_points(channels: Channels, points: TurningPoints) -> list[str]:
+    if points.a.frequency_mhz <= channels.start_mhz and channels.stop_mhz <= points.e.frequency_mhz:
+        return []
+    return [
+        f"turning_points.a to turning_points.e, {points.a.frequency_mhz} to {points.e.frequency_mhz} MHz, must enclose "
+        f"channels.start to channels.stop, {channels.start_mhz} to {channels.stop_mhz} MHz"
+    ]
+
+
+def _channels_and_signal(channels: Channels, signal: Any) -> list[str]:
+    if signal.kind != "turning-points":
+        return []
+    low, high = signal.a.frequency_mhz, signal.e.frequency_mhz
+    if low <= channels.start_mhz and channels.stop_mhz <= high:
+        return []
+    return [
+        f"signal.a to signal.e, {low} to {high} MHz, must enclose channels.start to channels.stop, "
+        f"{channels.start_mhz} to {channels.stop_mhz} MHz"
+    ]
+
+
+def _channels_and_foreground(channels: Channels, foreground: Foreground) -> list[str]:
+    edges = np.linspace(channels.start_mhz, channels.stop_mhz, channels.count + 1)
+    masked = np.zeros(channels.count, dtype=bool)
+    for lower, upper in channels.masks_mhz:
+        masked |= (edges[1:] > lower) & (edges[:-1] < upper)
+    left = channels.count - int(masked.sum())
+    if left > foreground.terms:
+        return []
+    return [
+        f"foreground.terms: {foreground.terms} terms need more channels than the {left} that channels.count and "
+        "channels.masks leave"
+    ]
+
+
+def _plane_below_wire(beam: Any) -> list[str]:
+    vertical = beam.kind == "dipole" and beam.wire == "vertical" and beam.height_m is not None
+    if vertical and beam.height_m < beam.length_m / 2:
+        return [
+            f"beam.height, {beam.height_m} m, puts the lower end of a vertical wire of {beam.length_m} m below the plane"
+        ]
+    return []
+
+
+_JUDGES: tuple[tuple[tuple[str, ...], Callable[..., list[str]]], ...] = (
+    (("bins", "vantage"), _bins_and_vantage),
+    (("observation", "vantage"), _observation_and_vantage),
+    (("channels", "sky"), _channels_and_sky),
+    (("channels", "turning_points"), _channels_and_turning_points),
+    (("channels", "signal"), _channels_and_signal),
+    (("channels", "foreground"), _channels_and_foreground),
+    (("beam",), _plane_below_wire),
+)

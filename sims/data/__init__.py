@@ -1,0 +1,1 @@
+"""Tables that come with the package, each with its provenance in its heading."""

@@ -1,0 +1,111 @@
+"""Draws from ``[knowledge]``: a configuration as it might truly be, and one leaf moved by its error.
+
+The mock's truth, the covariance of the data and every ensemble come from here, so that
+one table says what is uncertain.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from pydantic import ValidationError
+from scipy import stats
+
+from sims.config import Config
+from sims.config_paths import value_at
+from sims.errors import InputError
+from sims.knowledge import Known
+from sims.streams import stream
+
+
+@dataclass(frozen=True)
+class Draw:
+    """One draw: the configuration with its leaves moved, and what was drawn.
+
+    Attributes
+    ----------
+    config : Config
+        The configuration with drawn leaves in place.
+    values : dict of str to float
+        Each leaf's drawn value, in the leaf's unit.
+    index : int
+        Which draw of its stream; fields are drawn again from it where they are needed.
+    """
+
+    config: Config
+    values: dict[str, float]
+    index: int
+
+
+def leaf_value(config: Config, path: str) -> float:
+    """Configured value of the numeric leaf at `path`."""
+    return float(value_at(config, path))
+
+
+def with_leaves(config: Config, values: dict[str, float]) -> Config:
+    """Copy of `config` with the leaves at these paths set.
+
+    Raises
+    ------
+    InputError
+        If a value lies outside what its leaf allows: its distribution wants a bound.
+    """
+    tree = config.model_dump()
+    for path, value in values.items():
+        *steps, last = path.split(".")
+        node: Any = tree
+        for step in steps:
+            key: str | int = int(step) if step.isdigit() else step
+            if isinstance(node[key], tuple):
+                node[key] = list(node[key])
+            node = node[key]
+        node[int(last) if last.isdigit() else last] = value
+    try:
+        return Config.model_validate(tree)
+    except ValidationError as error:
+        raise InputError(
+            [
+                f"knowledge: a drawn value of {'.'.join(map(str, item['loc']))} is not allowed ({item['msg']}); "
+                "give the distribution a lower or upper bound"
+                for item in error.errors()
+            ]
+        ) from None
+
+
+def draw(config: Config, name: str, index: int = 0) -> Draw:
+    """Draw every leaf that ``[knowledge]`` names.
+
+    Parameters
+    ----------
+    config : Config
+        Nominal configuration; its seed is used.
+    name : str
+        Name of the stream, so that truth and ensembles never share numbers.
+    index : int
+        Which draw; each can be made again alone.
+
+    Returns
+    -------
+    Draw
+        Correlated groups are joined by a Gaussian copula.
+    """
+    rng = stream(config.run.seed, f"{name}/leaves", index)
+    leaves = config.knowledge.leaves
+    scores = rng.standard_normal(len(leaves))
+    place = {leaf.path: number for number, leaf in enumerate(leaves)}
+    for group in config.knowledge.correlated:
+        rows = [place[path] for path in group.paths]
+        values, vectors = np.linalg.eigh(np.array(group.correlation))
+        scores[rows] = (vectors * np.sqrt(np.clip(values, 0.0, None))) @ scores[rows]
+    drawn = {leaf.path: _from_score(leaf, leaf_value(config, leaf.path), scores[place[leaf.path]]) for leaf in leaves}
+    return Draw(config=with_leaves(config, drawn), values=drawn, index=index)
+
+
+def _from_score(leaf: Known, nominal: float, score: float) -> float:
+    """Value whose rank in the leaf's distribution is that of `score` in the unit normal."""
+    distribution = leaf.frozen(nominal)
+    if score < 0.0:
+        return float(distribution.ppf(stats.norm.cdf(score)))
+    return float(distribution.isf(stats.norm.sf(score)))

@@ -1,0 +1,340 @@
+"""The geometry of the samples: limb, eclipses, attitude and selection, against closed forms and DE421."""
+
+from __future__ import annotations
+
+import warnings
+from datetime import UTC, datetime, timedelta, timezone
+from pathlib import Path
+from typing import Any, Literal
+
+import astropy.units as u
+import de421
+import numpy as np
+import pytest
+import xarray as xr
+from astropy.coordinates import AltAz, EarthLocation, SkyCoord, get_body
+from astropy.time import Time
+from astropy.utils import iers
+from jplephem import Ephemeris
+from numpy.typing import NDArray
+from scipy.spatial.transform import Rotation
+
+from sims.config import FixedBoresight, GroundSite, LunarOrbit, Observation, VerticalBoresight
+from sims.errors import InputError
+from sims.orbit import circular_period_s, lunar_equator_axes
+from sims.vantage import fixed_attitudes, pointing_turns, sample_times, survey_geometry
+
+START = datetime(2027, 6, 1, tzinfo=UTC)
+LIMB_DEG = 71.00998  # angular radius of the Moon from 100 km: asin(1737.4/1837.4)
+MOON_RADIUS_KM = 1737.4
+UP = VerticalBoresight(kind="vertical", azimuth_deg=0.0)
+TWO_FIELDS = FixedBoresight(kind="fixed", directions_deg=((80.0, -30.0), (200.0, 45.0)), roll_deg=25.0, dwell_s=600.0)
+Vector = NDArray[np.float64]
+
+
+def observation(**changes: Any) -> Observation:
+    settings: dict[str, Any] = {
+        "start": START,
+        "step_s": 10.0,
+        "count": 707,
+        "integration_hours": 100.0,
+        "duty_cycle": 0.5,
+        "require": (),
+    }
+    return Observation(**(settings | changes))
+
+
+def orbit(boresight: FixedBoresight | VerticalBoresight = UP, **changes: float) -> LunarOrbit:
+    elements = {"altitude_km": 100.0, "inclination_deg": 70.0, "node_deg": 15.0, "phase_deg": 0.0} | changes
+    return LunarOrbit(kind="lunar-orbit", boresight=boresight, **elements)
+
+
+def site(boresight: FixedBoresight | VerticalBoresight = UP, **changes: float) -> GroundSite:
+    place = {"latitude_deg": -26.7, "longitude_deg": 116.6, "height_m": 380.0, "horizon_deg": 0.0} | changes
+    return GroundSite(kind="ground", boresight=boresight, **place)
+
+
+def orbit_about(normal: Vector, towards: Vector) -> LunarOrbit:
+    """The orbit about a given normal (ICRS) that starts above a given direction in its plane."""
+    axes = lunar_equator_axes(Time(START))
+    x, y, z = axes @ normal
+    node_rad = np.arctan2(x, -y)
+    to_node = np.array([np.cos(node_rad), np.sin(node_rad), 0.0]) @ axes
+    phase_rad = np.arctan2(towards @ np.cross(normal, to_node), towards @ to_node)
+    return orbit(
+        inclination_deg=float(np.rad2deg(np.arccos(z))),
+        node_deg=float(np.rad2deg(node_rad)),
+        phase_deg=float(np.rad2deg(phase_rad)),
+    )
+
+
+def unit(vectors: Vector) -> Vector:
+    return np.asarray(vectors / np.linalg.norm(vectors, axis=-1, keepdims=True))
+
+
+def de421_earth_sun_from_moon_km(labels: NDArray[np.datetime64]) -> Vector:
+    jd = Time(labels, scale="utc").tdb.jd
+    ephemeris = Ephemeris(de421)
+    moon_from_earth = ephemeris.position("moon", jd).T
+    moon = ephemeris.position("earthmoon", jd).T + moon_from_earth * ephemeris.moon_share
+    return np.stack([-moon_from_earth, ephemeris.position("sun", jd).T - moon], axis=1)
+
+
+def earth_and_sun_at(instant: datetime) -> Vector:
+    label = np.array([instant.replace(tzinfo=None)], dtype="datetime64[ns]")
+    return np.asarray(de421_earth_sun_from_moon_km(label)[0])
+
+
+def antenna_axes(geometry: xr.Dataset) -> Vector:
+    """ICRS directions of the antenna's x, y and z, one row each: ndarray[time, antenna axis, axis]."""
+    return np.swapaxes(Rotation.from_quat(geometry["attitude"].values).as_matrix(), 1, 2)
+
+
+# --- the Moon below -------------------------------------------------------------------------------------------------
+
+
+def test_limb_from_100_km_has_its_closed_form() -> None:
+    geometry = survey_geometry(orbit(), observation())
+    np.testing.assert_allclose(np.rad2deg(geometry["limb_angle_rad"]), LIMB_DEG, atol=5e-6)  # digits given
+    np.testing.assert_allclose(
+        geometry["nadir"].values, -geometry["position_km"].values / 1837.4, atol=1e-14
+    )  # rounding
+
+
+@pytest.mark.parametrize("beta_deg", [0.0, 30.0, 60.0, 70.0])
+def test_share_of_the_orbit_behind_the_moon_has_its_closed_form(beta_deg: float) -> None:
+    # Around the middle of the orbit, so that what the Earth's own motion does to beta cancels to first order.
+    period_s = circular_period_s(100.0)
+    earth_km = earth_and_sun_at(START + timedelta(seconds=period_s / 2.0))[0]
+    earth, beta = unit(earth_km), np.deg2rad(beta_deg)
+    across = unit(np.cross(earth, [0.0, 0.0, 1.0]))
+    normal = np.sin(beta) * earth + np.cos(beta) * across
+    vantage = orbit_about(normal, towards=unit(earth - (earth @ normal) * normal))
+    count = 7067
+    geometry = survey_geometry(vantage, observation(step_s=period_s / count, count=count))
+    # Hidden within asin(R/r) of the far side for a point at infinity; at a distance d its rays spread by asin(R/d).
+    shadow_rad = np.deg2rad(LIMB_DEG) + np.arcsin(MOON_RADIUS_KM / np.linalg.norm(earth_km))
+    share = np.arccos(min(np.cos(shadow_rad) / np.cos(beta), 1.0)) / np.pi
+    # The Earth moves along it by up to 0.3 % of the spacecraft's rate (7067 s against 27.3 days), 0.0012 of 0.396,
+    # and sampling by 1/7067.
+    assert float(geometry["earth_hidden"].mean()) == pytest.approx(share, abs=0.0014)
+
+
+def test_in_the_plane_of_a_distant_body_the_hidden_share_is_the_limb_angle_over_pi() -> None:
+    sun = unit(earth_and_sun_at(START)[1])
+    pole = lunar_equator_axes(Time(START))[2]
+    vantage = orbit_about(unit(np.cross(sun, pole)), towards=sun)
+    geometry = survey_geometry(vantage, observation(step_s=1.0, count=7067))
+    # 71.00998/180 for a point at infinity; the Sun's distance and motion change it by 1e-5, sampling by 1/7067.
+    assert float(geometry["sun_hidden"].mean()) == pytest.approx(LIMB_DEG / 180.0, abs=2e-4)
+
+
+def test_longest_shadow_at_100_km_is_2788_seconds() -> None:
+    sun = unit(earth_and_sun_at(START)[1])
+    pole = lunar_equator_axes(Time(START))[2]
+    # An orbit over the poles: the Sun then moves across its plane, which leaves the length of the shadow alone.
+    vantage = orbit_about(unit(np.cross(sun, pole)), towards=sun)
+    hidden = survey_geometry(vantage, observation(step_s=0.5, count=14_134))["sun_hidden"].values
+    edges = np.flatnonzero(np.diff(hidden.astype(int)))
+    assert edges.size == 2
+    # Point Sun at infinity: 2 asin(R/r) of a turn in 7067.460 s; each edge is seen to one step.
+    assert (edges[1] - edges[0]) * 0.5 == pytest.approx(2788.1, abs=1.0)
+
+
+def test_what_is_hidden_agrees_with_the_line_of_sight_by_de421() -> None:
+    geometry = survey_geometry(orbit(), observation(step_s=97.0, count=20_000))
+    place = geometry["position_km"].values
+    bodies = de421_earth_sun_from_moon_km(geometry["time"].values)
+    for index, name in enumerate(("earth_hidden", "sun_hidden")):
+        # The line of sight meets the sphere when its nearest point to the centre lies ahead and inside the radius.
+        sight = bodies[:, index] - place
+        ahead = np.einsum("ta,ta->t", -place, unit(sight))
+        nearest_km = np.sqrt(np.maximum(np.einsum("ta,ta->t", place, place) - ahead**2, 0.0))
+        blocked = (ahead > 0.0) & (nearest_km < MOON_RADIUS_KM)
+        # The two ephemerides differ by 12 arcsec at most, 35 m at the limb 600 km away: set aside the samples so close.
+        clear = np.abs(nearest_km - MOON_RADIUS_KM) > 0.05
+        assert clear.mean() > 0.99
+        np.testing.assert_array_equal(geometry[name].values[clear], blocked[clear])
+        assert 0.2 < blocked.mean() < 0.5  # both answers are tested
+
+
+# --- the ground below -----------------------------------------------------------------------------------------------
+
+
+def test_sun_sets_on_the_ground_when_astropy_says_so() -> None:
+    for horizon_deg in (0.0, 10.0):
+        geometry = survey_geometry(site(horizon_deg=horizon_deg), observation(step_s=600.0, count=300))
+        with (
+            iers.conf.set_temp("auto_download", False),
+            iers.conf.set_temp("auto_max_age", None),
+            iers.conf.set_temp("iers_degraded_accuracy", "warn"),
+        ):
+            times = Time(geometry["time"].values, scale="utc")
+            place = EarthLocation.from_geodetic(lat=-26.7 * u.deg, lon=116.6 * u.deg, height=380.0 * u.m)
+            frame = AltAz(obstime=times, location=place, pressure=0.0 * u.hPa)
+            altitude_deg = get_body("sun", times, place, ephemeris="builtin").transform_to(frame).alt.deg
+        # Aberration (21 arcsec) and UT1 beyond the measured part of the tables (1.8 s, 27 arcsec).
+        clear = np.abs(altitude_deg - horizon_deg) > 48.0 / 3600.0
+        assert clear.mean() > 0.95
+        np.testing.assert_array_equal(geometry["sun_hidden"].values[clear], altitude_deg[clear] < horizon_deg)
+        assert 0.4 < geometry["sun_hidden"].values.mean() < 0.8  # both answers are tested
+        assert not geometry["earth_hidden"].any()
+        assert "does not apply" in geometry["earth_hidden"].attrs["long_name"]
+
+
+def test_a_raised_horizon_hides_more_than_the_lower_half() -> None:
+    # From straight down a horizon raised by 10 deg is reached after 90 + 10 deg.
+    geometry = survey_geometry(site(horizon_deg=10.0), observation())
+    np.testing.assert_allclose(np.rad2deg(geometry["limb_angle_rad"]), 100.0, rtol=1e-14)  # rounding
+
+
+def test_ground_site_turns_once_in_a_sidereal_day() -> None:
+    # 86164.0905 s, mean sidereal day (Explanatory Supplement to the Astronomical Almanac).
+    geometry = survey_geometry(site(), observation(step_s=86_164.0905 / 4.0, count=5))
+    sidereal_hours = geometry["sidereal_time_hours"].values
+    # Nutation and the table's UT1 move by milliseconds in a day.
+    np.testing.assert_allclose((np.diff(sidereal_hours) + 24.0) % 24.0, 6.0, atol=0.02 / 3600.0)
+    # Precession, 50 arcsec a year, and nutation: a fraction of an arcsecond in a day.
+    np.testing.assert_allclose(geometry["nadir"].values[0], geometry["nadir"].values[-1], atol=5e-6)
+
+
+# --- attitude -------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("vantage", [orbit(TWO_FIELDS), site(TWO_FIELDS)])
+def test_fixed_boresight_holds_its_directions_and_roll(vantage: LunarOrbit | GroundSite) -> None:
+    geometry = survey_geometry(vantage, observation(count=101))
+    x, y, z = np.moveaxis(antenna_axes(geometry), 1, 0)
+    for index, (ra_deg, dec_deg) in enumerate(TWO_FIELDS.directions_deg):
+        field = geometry["pointing"].values == index
+        centre = SkyCoord(ra_deg * u.deg, dec_deg * u.deg)
+        np.testing.assert_allclose(z[field] - centre.cartesian.xyz.value, 0.0, atol=1e-14)  # rounding
+        # A point a little way along x is seen from the centre at the roll angle, north through east (astropy).
+        nearby = SkyCoord(*(z[field] + 1e-4 * x[field]).T, representation_type="cartesian")
+        np.testing.assert_allclose(centre.position_angle(nearby).deg, 25.0, atol=1e-6)  # rounding over 1e-4
+    np.testing.assert_allclose(np.cross(x, y), z, atol=1e-14)  # right-handed
+
+
+def test_fixed_boresight_at_the_pole_is_still_defined() -> None:
+    (attitude,) = fixed_attitudes(
+        FixedBoresight(kind="fixed", directions_deg=((30.0, 90.0),), roll_deg=0.0, dwell_s=600.0)
+    )
+    matrix = Rotation.from_quat(attitude).as_matrix()
+    np.testing.assert_allclose(matrix[:, 2], [0.0, 0.0, 1.0], atol=1e-15)  # rounding
+    # The limit of north along the meridian of 30 deg: away from it.
+    np.testing.assert_allclose(matrix[:, 0], [-np.cos(np.pi / 6), -np.sin(np.pi / 6), 0.0], atol=1e-15)
+
+
+def test_vertical_boresight_in_orbit_is_opposite_nadir_and_counts_azimuth_from_the_motion() -> None:
+    for azimuth_deg in (0.0, 90.0, -40.0):
+        upward = VerticalBoresight(kind="vertical", azimuth_deg=azimuth_deg)
+        geometry = survey_geometry(orbit(upward), observation(step_s=1.0, count=3000))
+        x, _, z = np.moveaxis(antenna_axes(geometry), 1, 0)
+        np.testing.assert_allclose(z, -geometry["nadir"].values, atol=1e-14)  # rounding
+        place = geometry["position_km"].values
+        motion = unit(place[2:] - place[:-2])
+        right = np.cross(motion, z[1:-1])  # seen from above, clockwise from the motion
+        along, across = (np.einsum("ta,ta->t", x[1:-1], axis) for axis in (motion, right))
+        np.testing.assert_allclose(along, np.cos(np.deg2rad(azimuth_deg)), atol=1e-12)  # symmetric difference: rounding
+        np.testing.assert_allclose(across, np.sin(np.deg2rad(azimuth_deg)), atol=1e-12)
+
+
+def test_vertical_boresight_on_the_ground_counts_azimuth_from_north_through_east() -> None:
+    upward = VerticalBoresight(kind="vertical", azimuth_deg=90.0)
+    geometry = survey_geometry(site(upward), observation(count=50))
+    x, _, z = np.moveaxis(antenna_axes(geometry), 1, 0)
+    np.testing.assert_allclose(z, -geometry["nadir"].values, atol=1e-14)  # rounding
+    # The rotation of the Earth carries a site due east.
+    place = geometry["position_km"].values
+    np.testing.assert_allclose(x[1:-1], unit(place[2:] - place[:-2]), atol=1e-6)  # precession: 1e-7 of the rotation
+
+
+# --- samples --------------------------------------------------------------------------------------------------------
+
+
+def test_integration_is_shared_out_over_the_samples_kept() -> None:
+    # Near full Moon the Earth and Sun stand on the same side of it; near new Moon hardly any orbit has both hidden.
+    settings = {"start": datetime(2027, 6, 18, tzinfo=UTC), "step_s": 60.0, "count": 5000}
+    everything = survey_geometry(orbit(TWO_FIELDS), observation(**settings))
+    kept = survey_geometry(orbit(TWO_FIELDS), observation(**settings, require=("earth-hidden", "sun-hidden")))
+    both = (everything["earth_hidden"] & everything["sun_hidden"]).values
+    assert 0 < kept.sizes["time"] == both.sum() < 5000
+    for name in everything.data_vars:
+        if name != "integration_s":
+            np.testing.assert_array_equal(kept[name].values, everything[name].values[both])
+    for geometry in (everything, kept):
+        assert float(geometry["integration_s"].sum()) == pytest.approx(360_000.0, rel=1e-12)  # rounding of the sum
+        assert np.ptp(geometry["integration_s"].values) == 0.0
+
+
+def test_conditions_that_are_never_met_are_refused_with_their_counts() -> None:
+    earth = unit(earth_and_sun_at(START)[0])
+    vantage = orbit_about(earth, towards=unit(np.cross(earth, [0.0, 0.0, 1.0])))  # face on: the Earth never sets
+    with pytest.raises(InputError) as caught:
+        survey_geometry(vantage, observation(require=("earth-hidden", "sun-hidden")))
+    sun_hidden = int(survey_geometry(vantage, observation())["sun_hidden"].sum())
+    assert "none of the 707 samples" in str(caught.value)
+    assert f"earth-hidden in 0, sun-hidden in {sun_hidden}" in str(caught.value)
+
+
+def test_bad_observations_are_refused() -> None:
+    naive = observation().model_copy(update={"start": datetime(2027, 6, 1)})
+    unknown = observation().model_copy(update={"require": ("moon-hidden", "sun-hidden", "quiet")})
+    for wrong, said in (
+        (naive, "no time zone"),
+        (observation(start=datetime(1969, 7, 20, tzinfo=UTC)), "reach outside"),
+        (observation(step_s=1e9, count=5), "reach outside"),
+        (observation(step_s=1e300, count=5), "reach outside"),
+    ):
+        with pytest.raises(InputError, match=said):
+            survey_geometry(orbit(TWO_FIELDS), wrong)
+    with pytest.raises(InputError) as caught:
+        survey_geometry(orbit(), unknown)
+    assert len(caught.value.problems) == 2
+
+
+def test_each_direction_has_its_turn_for_the_dwell_time() -> None:
+    elapsed_s = np.array([0.0, 299.0, 300.0, 599.0, 600.0, 899.0, 900.0, 5400.0])
+    assert pointing_turns(elapsed_s, 300.0, 3).tolist() == [0, 0, 1, 1, 2, 2, 0, 0]
+
+
+def test_labels_and_instants_agree_with_astropy_across_a_leap_second() -> None:
+    # A leap second was inserted at the end of 2016-12-31 (IERS Bulletin C 52).
+    labels, times = sample_times(
+        observation(start=datetime(2016, 12, 31, 11, 59, 58, tzinfo=UTC), step_s=7200.5, count=13)
+    )
+    np.testing.assert_allclose((times - Time(labels, scale="utc").tt).to_value("s"), 0.0, atol=1e-9)  # rounding
+    assert labels[-1] == np.datetime64("2017-01-01T12:00:04", "ns")
+    # Between the first and last label 24 h 6 s, and the leap second.
+    assert (times[-1] - times[0]).to_value("s") == pytest.approx(86_407.0, abs=1e-6)
+
+
+def test_start_in_another_zone_is_the_same_instant() -> None:
+    local = observation(start=datetime(2027, 6, 1, 8, tzinfo=timezone(timedelta(hours=8))))
+    np.testing.assert_array_equal(sample_times(local)[0], sample_times(observation())[0])
+
+
+@pytest.mark.parametrize("vantage", [orbit(TWO_FIELDS), site()])
+@pytest.mark.parametrize("year", [2028, 2060])
+def test_later_years_are_computed_without_a_warning(vantage: LunarOrbit | GroundSite, year: int) -> None:
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")
+        geometry = survey_geometry(vantage, observation(start=datetime(year, 3, 1, tzinfo=UTC)))
+    assert all(np.isfinite(geometry[name].values).all() for name in geometry.data_vars)
+    assert "no leap second beyond" in geometry.attrs["time_system"]
+
+
+@pytest.mark.parametrize(("vantage", "own"), [(orbit(TWO_FIELDS), "orbit_phase"), (site(), "sidereal_time_hours")])
+def test_dataset_is_described_and_survives_a_file(
+    vantage: LunarOrbit | GroundSite, own: Literal["orbit_phase", "sidereal_time_hours"], tmp_path: Path
+) -> None:
+    geometry = survey_geometry(vantage, observation(require=("sun-hidden",), step_s=120.0))
+    assert set(geometry.data_vars) == {
+        *("position_km", "attitude", "nadir", "limb_angle_rad", "earth_hidden", "sun_hidden"),
+        *("pointing", "integration_s", own),
+    }
+    assert all({"units", "long_name"} <= set(geometry[name].attrs) for name in geometry.data_vars)
+    np.testing.assert_allclose(np.linalg.norm(geometry["attitude"], axis=-1), 1.0, atol=1e-14)  # rounding
+    geometry.to_netcdf(tmp_path / "geometry.nc", engine="h5netcdf")
+    with xr.open_dataset(tmp_path / "geometry.nc", engine="h5netcdf") as again:
+        xr.testing.assert_identical(again.load(), geometry)
