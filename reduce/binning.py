@@ -50,21 +50,30 @@ def bin_recording(recording: xr.Dataset, bins: Bins) -> xr.Dataset:
     -------
     xarray.Dataset
         `sims.schema.SPECTRA`. A channel is used where any sample of the bin has it;
-        where none has, it is flagged and its temperature is NaN.
+        where none has, it is flagged and its temperature is NaN. The signal response is
+        averaged over the samples that the temperature is, or over all where none is used.
     """
     label = bin_of_each_sample(recording, bins)
     weight = recording["integration_s"].values[:, None] * (recording["flag"].values == 0)
     total = sum_by_bin(weight, label, bins.count)
+    used = weight > 0.0
+    temperature_k = np.where(used, recording["antenna_temperature_k"].values, 0.0)
+    variance_k2 = np.where(used, recording["noise_variance_k2"].values, 0.0)
+    response = recording["signal_response"].values
     with np.errstate(invalid="ignore", divide="ignore"):
-        temperature = sum_by_bin(weight * recording["antenna_temperature_k"].values, label, bins.count) / total
-        variance = sum_by_bin(weight**2 * recording["noise_variance_k2"].values, label, bins.count) / total**2
+        temperature = sum_by_bin(weight * temperature_k, label, bins.count) / total
+        variance = sum_by_bin(weight**2 * variance_k2, label, bins.count) / total**2
+        used_response = sum_by_bin(weight * response, label, bins.count) / total
     flags = recording["flag"].values
     everywhere = np.bitwise_and.reduce(flags, axis=0) if len(flags) else np.uint8(0)
     flag = np.where(total > 0.0, 0, everywhere | FLAG_EMPTY).astype(np.uint8)
     spectra = recording[["frequency_mhz", "width_mhz"]].assign(
         antenna_temperature_k=(("bin", "channel"), temperature),
         noise_variance=(("bin", "channel"), variance),
-        signal_response=(("bin", "channel"), mean_by_bin(recording["signal_response"].values, recording, bins)),
+        signal_response=(
+            ("bin", "channel"),
+            np.where(total > 0.0, used_response, mean_by_bin(response, recording, bins)),
+        ),
         flag=(("bin", "channel"), flag),
         weight_s=("bin", sum_by_bin(recording["integration_s"].values[:, None], label, bins.count)[:, 0]),
     )

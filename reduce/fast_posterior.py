@@ -1,8 +1,8 @@
-"""The same posterior in a fraction of a second, for hundreds of mocks and to start the sampler.
+"""The same posterior in a second, for hundreds of mocks and to start the sampler.
 
-Importance sampling in stages: draws from the prior first, then from a multivariate t fitted
-to what they found; a likelihood too sharp for the draws so far is first tempered. All draws are weighted by the whole mixture they came from (the balance
-heuristic; Veach and Guibas 1995; Cornuet et al. 2012, adaptive multiple importance sampling).
+Annealed sequential Monte Carlo (Del Moral, Doucet and Jasra 2006, J. R. Stat. Soc. B 68,
+411): draws from the prior are weighted by a growing power of the likelihood, resampled, and
+moved by differential evolution (ter Braak 2006, Stat. Comput. 16, 239) until the power is 1.
 """
 
 from __future__ import annotations
@@ -11,18 +11,18 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import stats
 
 from reduce.combine import Information
-from reduce.trough_model import NAMES, TroughModel
+from reduce.trough_model import TroughModel
 
 FloatArray = NDArray[np.float64]
 
-TAIL_DEGREES = 5.0
-WIDENING = 1.3
-ENOUGH_DRAWS = 200.0
+KEPT_SHARE = 0.5  # of the effective draws, from one power of the likelihood to the next
 BISECTIONS = 40
-MOST_STAGES = 15
+MOVES = 8
+LAST_MOVES = 24
+STRIDES = np.array([0.3, 0.69, 1.0])  # of a difference of two draws; 2.38/sqrt(2 d) is 0.69 in six dimensions
+JITTER = 1e-6
 
 
 @dataclass(frozen=True)
@@ -39,11 +39,6 @@ class WeightedPosterior:
 
     parameters: FloatArray
     weight: FloatArray
-
-    @property
-    def effective_size(self) -> float:
-        """Kish's effective number of draws."""
-        return _effective_size(self.weight)
 
     def mean(self) -> FloatArray:
         """Posterior means ndarray[6]."""
@@ -80,34 +75,22 @@ class PriorBank:
     ----------
     parameters : ndarray[draw, 6]
     signal_k : ndarray[draw, channel]
-    log_density : float
-        Log of the prior's density where it is not zero.
     """
 
     parameters: FloatArray
     signal_k: FloatArray
-    log_density: float
 
 
-def prior_bank(model: TroughModel, rng: np.random.Generator, size: int = 8000) -> PriorBank:
-    """Draw a bank; the prior's density follows from the share of its box that is allowed."""
-    tries = rng.uniform(model.lower, model.upper, (40 * size, len(NAMES)))
-    share = float(np.mean(model.allowed(tries)))
+def prior_bank(model: TroughModel, rng: np.random.Generator, size: int = 2000) -> PriorBank:
+    """Draw a bank."""
     parameters = model.draw_prior(rng, size)
-    log_density = -float(np.sum(np.log(model.upper - model.lower))) - np.log(share)
-    return PriorBank(parameters, model.signal_k(parameters), log_density)
+    return PriorBank(parameters, model.signal_k(parameters))
 
 
 def fast_posterior(
-    information: Information,
-    model: TroughModel,
-    bank: PriorBank,
-    rng: np.random.Generator,
-    *,
-    enough: float = 1000.0,
-    draws: int = 4000,
+    information: Information, model: TroughModel, bank: PriorBank, rng: np.random.Generator
 ) -> WeightedPosterior:
-    """Importance-weighted posterior of the turning points.
+    """Posterior of the turning points by annealing the draws of a bank.
 
     Parameters
     ----------
@@ -117,72 +100,95 @@ def fast_posterior(
     bank : PriorBank
         From `prior_bank` of the same model.
     rng : numpy.random.Generator
-    enough : float
-        Effective size at which to stop; after `MOST_STAGES` stages it stops all the same.
-    draws : int
-        Draws a stage.
 
     Returns
     -------
     WeightedPosterior
-        Its `effective_size` says how far to trust it.
+        As many draws as the bank has, of equal weight.
     """
-    parameters = bank.parameters
-    log_likelihood = information.log_likelihood(bank.signal_k)
-    proposals: list[tuple[int, stats._multivariate.multivariate_t_frozen]] = []
-    mixture = np.zeros(len(parameters))
-    for _ in range(MOST_STAGES):
-        posterior = WeightedPosterior(parameters, _tempered(log_likelihood, mixture))
-        shape = WIDENING * posterior.covariance() + 1e-12 * np.diag((model.upper - model.lower) ** 2)
-        proposal = stats.multivariate_t(posterior.mean(), shape, df=TAIL_DEGREES, seed=rng)
-        proposals.append((draws, proposal))
-        fresh = proposal.rvs(draws)
-        value = model.log_probability(fresh, information)
-        parameters = np.concatenate([parameters, fresh])
-        log_likelihood = np.concatenate([log_likelihood, value])
-        mixture = _log_mixture(parameters, model, bank, proposals)
-        weight = _normalised(log_likelihood - mixture)
-        if _effective_size(weight) >= enough:
-            break
-    return WeightedPosterior(parameters[weight > 0.0], weight[weight > 0.0])
+    draws, value = bank.parameters, information.log_likelihood(bank.signal_k)
+    power = 0.0
+    while power < 1.0:
+        step = _next_step(value, 1.0 - power)
+        power = 1.0 if step == 1.0 - power else power + step
+        chosen = _resampled(_normalised(step * value), rng)
+        draws, value = draws[chosen], value[chosen]
+        moves = MOVES if power < 1.0 else LAST_MOVES
+        draws, value = _moved(draws, value, power, moves, information, model, rng)
+    return WeightedPosterior(draws, np.full(len(draws), 1.0 / len(draws)))
 
 
-def _tempered(log_likelihood: FloatArray, log_mixture: FloatArray) -> FloatArray:
-    """Weights with the likelihood raised to the largest power up to 1 that leaves enough effective draws."""
+def carried_over(
+    posterior: WeightedPosterior, before: Information, after: Information, model: TroughModel, rng: np.random.Generator
+) -> WeightedPosterior | None:
+    """The posterior after the data's covariance changed a little, from that before.
 
-    def weights(power: float) -> FloatArray:
-        # Where the prior is zero the likelihood is -inf, and no power of it is anything else.
-        return _normalised(np.where(np.isfinite(log_likelihood), power * log_likelihood - log_mixture, -np.inf))
+    Parameters
+    ----------
+    posterior : WeightedPosterior
+        Of `before`, equal weights.
+    before, after : Information
+    model : TroughModel
+    rng : numpy.random.Generator
 
-    low, high = 0.0, 1.0
-    if _effective_size(weights(1.0)) >= ENOUGH_DRAWS:
-        return weights(1.0)
+    Returns
+    -------
+    WeightedPosterior or None
+        None where the change is too large: too few effective draws would be left.
+    """
+    signal_k = model.signal_k(posterior.parameters)
+    value = after.log_likelihood(signal_k)
+    weight = _normalised(value - before.log_likelihood(signal_k))
+    if 1.0 / np.sum(weight**2) < KEPT_SHARE * len(weight):
+        return None
+    chosen = _resampled(weight, rng)
+    draws, _ = _moved(posterior.parameters[chosen], value[chosen], 1.0, LAST_MOVES, after, model, rng)
+    return WeightedPosterior(draws, posterior.weight)
+
+
+def _next_step(value: FloatArray, room: float) -> float:
+    """How far the power can grow before too few effective draws are left; all the room there is, if it can."""
+
+    def kept(step: float) -> bool:
+        return bool(1.0 / np.sum(_normalised(step * value) ** 2) >= KEPT_SHARE * len(value))
+
+    if kept(room):
+        return room
+    low, high = 0.0, room
     for _ in range(BISECTIONS):
         middle = 0.5 * (low + high)
-        if _effective_size(weights(middle)) >= ENOUGH_DRAWS:
-            low = middle
-        else:
-            high = middle
-    return weights(low)
+        low, high = (middle, high) if kept(middle) else (low, middle)
+    return low
 
 
-def _log_mixture(
-    parameters: FloatArray,
+def _resampled(weight: FloatArray, rng: np.random.Generator) -> NDArray[np.int64]:
+    """Systematic resampling: numbers of the draws that go on."""
+    places = (rng.random() + np.arange(len(weight))) / len(weight)
+    return np.minimum(np.searchsorted(np.cumsum(weight), places), len(weight) - 1)
+
+
+def _moved(
+    draws: FloatArray,
+    value: FloatArray,
+    power: float,
+    moves: int,
+    information: Information,
     model: TroughModel,
-    bank: PriorBank,
-    proposals: list[tuple[int, stats._multivariate.multivariate_t_frozen]],
-) -> FloatArray:
-    """Log density of the mixture that all draws so far came from."""
-    total = len(bank.parameters) + sum(count for count, _ in proposals)
-    prior = np.where(model.allowed(parameters), bank.log_density, -np.inf)
-    parts = [prior + np.log(len(bank.parameters) / total)]
-    parts += [np.atleast_1d(proposal.logpdf(parameters)) + np.log(count / total) for count, proposal in proposals]
-    return np.asarray(np.logaddexp.reduce(parts, axis=0))
-
-
-def _effective_size(weight: FloatArray) -> float:
-    """Kish's effective number of draws of weights that sum to one."""
-    return float(1.0 / np.sum(weight**2))
+    rng: np.random.Generator,
+) -> tuple[FloatArray, FloatArray]:
+    """Metropolis moves along differences of two draws of a frozen population, so each is its own reverse."""
+    population, size = draws.copy(), len(draws)
+    jitter = JITTER * (model.upper - model.lower)
+    for _ in range(moves):
+        one, other = rng.integers(size, size=(2, size))
+        stride = rng.choice(STRIDES, size=size)[:, None]
+        noise = jitter * rng.standard_normal(draws.shape)
+        proposed = draws + stride * (population[one] - population[other]) + noise
+        proposed_value = model.log_probability(proposed, information)
+        taken = np.log(rng.random(size)) < power * (proposed_value - value)
+        draws = np.where(taken[:, None], proposed, draws)
+        value = np.where(taken, proposed_value, value)
+    return draws, value
 
 
 def _normalised(log_weight: FloatArray) -> FloatArray:

@@ -103,7 +103,7 @@ def combined_spectrum_text(packed: xr.Dataset) -> str:
     sigma = np.sqrt(np.diag(spectrum.covariance_k2))
     lines = [
         "# Signal common to all bins, projected: for looking at, not to be fitted.",
-        f"# Drawn are the {spectrum.kept} directions, of {spectrum.directions}, known to better than {DRAWN_ERROR_K:g} K;",
+        f"# Drawn are {spectrum.kept} of {spectrum.directions} directions: known to {DRAWN_ERROR_K:g} K or better;",
         "# the others, which the foreground model imitates, are set to zero. Errors are correlated.",
         "# To fit a signal s(f) use R and z of bundle.nc: ln L = -|R s - z|^2 / 2 + const.",
         "# frequency_mhz  temperature_k  sigma_k",

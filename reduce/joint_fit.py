@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from reduce.combine import Information, combine, response_modes
 from reduce.covariance import DiagonalLowRank, factor_basis
-from reduce.fast_posterior import WeightedPosterior, fast_posterior, prior_bank
+from reduce.fast_posterior import WeightedPosterior, carried_over, fast_posterior, prior_bank
 from reduce.foreground.log_polynomial import LogPolynomial
 from reduce.foreground.power_series import PowerSeries
 from reduce.foreground.protocol import Family
@@ -42,7 +42,7 @@ class JointFit:
     removed : RemovedSignal
         What the foreground fit leaves of the fiducial signal.
     posterior : WeightedPosterior
-        Of the turning points, importance-weighted.
+        Of the turning points, annealed.
     fiducial_signal_k : ndarray[channel]
         Signal at which the response's uncertainty was taken, K.
     bins : ndarray[bin]
@@ -107,6 +107,7 @@ def joint_fit(spectra: xr.Dataset, settings: Foreground, model: TroughModel, rng
     }
     first = subtract(**data, modes_k=np.zeros((*good[bins].shape, 0)))
     rounds = 0
+    last: tuple[Information, WeightedPosterior] | None = None
     while True:
         rounds += 1
         subtraction = subtract(**data, modes_k=beyond_foreground_k(covariance_modes_k(chosen, fiducial_k), first))
@@ -118,7 +119,9 @@ def joint_fit(spectra: xr.Dataset, settings: Foreground, model: TroughModel, rng
             good=good[bins],
             draws=None,
         )
-        posterior = fast_posterior(information, model, bank, rng)
+        carried = None if last is None else carried_over(last[1], last[0], information, model, rng)
+        posterior = carried or fast_posterior(information, model, bank, rng)
+        last = (information, posterior)
         found_k = posterior.weight @ model.signal_k(posterior.parameters)
         at_rest = "response_modes" not in chosen or np.abs(found_k - fiducial_k).max() < AT_REST_K
         if at_rest or rounds == MOST_ROUNDS:

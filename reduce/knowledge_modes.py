@@ -1,9 +1,9 @@
 """What ``[knowledge]`` says of single numbers, as modes of the data's covariance.
 
-Each leaf is moved up and down by its standard deviation and the campaign is simulated
-again, without noise, on a thinned set of samples. The slope of the binned spectra times the
-standard deviation is a common error of one standard deviation: a column of U in C = noise + U U'. What the
-same move does to the signal response goes with it.
+Each leaf is moved up and down by its error and the campaign is simulated again, without
+noise, on a thinned set of samples. The slope of the binned spectra times the error is a
+common error of one standard deviation: a column of U in C = noise + U U'. What the same
+move does to the signal response goes with it.
 """
 
 from __future__ import annotations
@@ -21,8 +21,9 @@ from sims.config import Config
 from sims.draws import leaf_value, with_leaves
 from sims.errors import InputError
 from sims.frequency import ChannelGrid, channel_grid
+from sims.knowledge import Known
 from sims.receiver import gain, received_k
-from sims.sky import sky_from
+from sims.sky import moved_sky, sky_from
 from sims.sky_average import SkyAverage
 from sims.vantage import survey_geometry
 
@@ -77,7 +78,12 @@ def knowledge_modes(config: Config, advance: Callable[[int], None]) -> Knowledge
     Returns
     -------
     KnowledgeModes
-        In the order of the table. Leaves outside the forward model have no mode.
+        In the order of the table.
+
+    Raises
+    ------
+    InputError
+        If a leaf is known so badly that no step of its error is allowed.
     """
     geometry = thinned(survey_geometry(config.vantage, config.observation), config)
     grid = channel_grid(config.channels)
@@ -87,17 +93,22 @@ def knowledge_modes(config: Config, advance: Callable[[int], None]) -> Knowledge
     names, temperatures, responses = [], [], []
     for leaf in config.knowledge.leaves:
         value = leaf_value(config, leaf.path)
-        sd = float(leaf.frozen(value).std())
+        sd = _error(leaf, value)
         pair, reached = [], []
         for sign in (-1.0, 1.0):
             moved = _moved(config, leaf.path, value, sign * sd)
             reached.append(leaf_value(moved, leaf.path))
             average = nominal
             if leaf.path.split(".")[0] in ENGINE_SECTIONS:
-                moved_sky = sky if moved.sky == config.sky else sky_from(moved.sky)
-                average = simulate(moved, moved_sky, geometry_like(moved, geometry, config), grid, _quiet)
+                other_sky = moved_sky(sky, config.sky, moved.sky)
+                average = simulate(moved, other_sky, geometry_like(moved, geometry, config), grid, _quiet)
                 advance(1)
             pair.append(_binned(moved, average, geometry, grid))
+        if reached[1] == reached[0]:
+            raise InputError(
+                f"knowledge.{leaf.path}: {value} can be moved by its error of {sd:g} neither up nor down within "
+                "what is allowed; give the distribution a smaller sd, or bounds"
+            )
         (low_k, low_w), (high_k, high_w) = pair
         names.append(leaf.path)
         temperatures.append((high_k - low_k) * sd / (reached[1] - reached[0]))
@@ -108,6 +119,12 @@ def knowledge_modes(config: Config, advance: Callable[[int], None]) -> Knowledge
         temperature_k=np.stack(temperatures) if names else np.zeros(shape),
         response=np.stack(responses) if names else np.zeros(shape),
     )
+
+
+def _error(leaf: Known, nominal: float) -> float:
+    """Root mean square of the leaf about its configured value: where `mean` differs, that counts as error too."""
+    distribution = leaf.frozen(nominal)
+    return float(np.hypot(distribution.std(), distribution.mean() - nominal))
 
 
 def _moved(config: Config, path: str, value: float, step: float) -> Config:

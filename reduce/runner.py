@@ -2,8 +2,9 @@
 
 The record in the folder keeps, for every product, the key of the stage that made it: a digest
 of the settings, input files and upstream keys it depends on, and the file's checksum. A
-product for which both still hold is reused; a folder
-that holds products of another configuration is refused unless an update is asked for.
+product for which both still hold is reused; a folder that holds products of another
+configuration is refused unless an update is asked for. Where the input is at fault and
+nothing has been redone, the folder is left as it was, record and log included.
 """
 
 from __future__ import annotations
@@ -161,11 +162,14 @@ def run_stages(
     """
     keys = stage_keys(stages, config, given)
     record = _claim(out, stages, keys, config, update)
+    before = json.dumps(record)
+    record |= {"configuration": config.model_dump(mode="json"), "versions": _versions()}
     journal = _Journal()
     journal.note(f"{datetime.now(UTC):%Y-%m-%d %H:%M:%S} UTC, quietlimb {version('quietlimb')}, {config.run.name}")
     tools = Tools(progress or _no_progress, journal.note)
     products = Products(given)
-    redone, reused = [], []
+    redone: list[str] = []
+    reused: list[str] = []
     try:
         for stage in stages:
             if _holds(out, stage, keys[stage.name], record):
@@ -180,14 +184,23 @@ def run_stages(
             for name, product in made.items():
                 products[name] = _write(out / name, product, config)
                 record["products"][name] = {"key": keys[stage.name], "sha256": sha256_of(out / name)}
-            write_text(out / RECORD, json.dumps(record, indent=1) + "\n")
+            _write_record(out, record)
             redone.append(stage.name)
             journal.note(f"{stage.title}: {time.monotonic() - begun:.2f} s")
+    except InputError as error:
+        if not redone:
+            raise
+        journal.note(f"stopped: {type(error).__name__}: {error}")
+        journal.append_to(out / LOG)
+        left = f"--out: {out} already holds the new products of {', '.join(redone)}; all else in it is as it was"
+        raise InputError([*error.problems, left]) from None
     except BaseException as error:
         journal.note(f"stopped: {type(error).__name__}: {error}")
-        raise
-    finally:
         journal.append_to(out / LOG)
+        raise
+    if json.dumps(record) != before:
+        _write_record(out, record)
+    journal.append_to(out / LOG)
     return Outcome(out, tuple(redone), tuple(reused), products)
 
 
@@ -224,22 +237,32 @@ def _claim(
         out.mkdir(parents=True, exist_ok=True)
     except OSError as error:
         raise InputError(f"--out: {out} cannot be made ({error.strerror})") from None
-    held: dict[str, Any] = {}
-    if (out / RECORD).is_file():
-        before = _read_record(out / RECORD)
-        held = before["products"]
-        wanted = {name: keys[stage.name] for stage in stages for name in stage.makes}
-        changed = sorted(name for name, product in held.items() if product["key"] != wanted.get(name))
-        if changed and not update:
-            raise InputError(
-                f"--out: {out} holds products of another run ({', '.join(_differences(before, config))}); name a new "
-                f"folder, or give --update to replace {', '.join(changed)}"
-            )
-    elif any(out.iterdir()):
-        raise InputError(f"--out: {out} is not empty and holds no {RECORD}; name a new folder")
-    record = {"configuration": config.model_dump(mode="json"), "versions": _versions(), "products": dict(held)}
-    write_text(out / RECORD, json.dumps(record, indent=1) + "\n")
+    if not (out / RECORD).is_file():
+        if any(out.iterdir()):
+            raise InputError(f"--out: {out} is not empty and holds no {RECORD}; name a new folder")
+        record = {"configuration": config.model_dump(mode="json"), "versions": _versions(), "products": {}}
+        try:
+            _write_record(out, record)
+        except OSError as error:
+            raise InputError(f"--out: {out} cannot be written to ({error.strerror})") from None
+        return record
+    record = _read_record(out / RECORD)
+    held = record["products"]
+    wanted = {name: keys[stage.name] for stage in stages for name in stage.makes}
+    others = sorted(set(held) - set(wanted))
+    if others:
+        raise InputError(f"--out: {out} holds {', '.join(others)}, which this command does not make; name a new folder")
+    changed = sorted(name for name, product in held.items() if product["key"] != wanted[name])
+    if changed and not update:
+        raise InputError(
+            f"--out: {out} holds products of another run ({', '.join(_differences(record, config))}); name a new "
+            f"folder, or give --update to replace {', '.join(changed)}"
+        )
     return record
+
+
+def _write_record(out: Path, record: dict[str, Any]) -> None:
+    write_text(out / RECORD, json.dumps(record, indent=1) + "\n")
 
 
 def _read_record(path: Path) -> dict[str, Any]:
@@ -247,6 +270,8 @@ def _read_record(path: Path) -> dict[str, Any]:
         record = json.loads(path.read_text(encoding="utf-8"))
         if not isinstance(record["products"], dict) or not isinstance(record["configuration"], dict):
             raise TypeError
+        for product in record["products"].values():
+            _ = product["key"], product["sha256"]
     except (OSError, ValueError, KeyError, TypeError):
         raise InputError(f"--out: {path} is not a record of quietlimb; name a new folder") from None
     return dict(record)
@@ -255,7 +280,7 @@ def _read_record(path: Path) -> dict[str, Any]:
 def _differences(before: dict[str, Any], config: FitConfig) -> list[str]:
     now, then = config.model_dump(mode="json"), before["configuration"]
     tables = [name for name in (*now, *(set(then) - set(now))) if now.get(name) != then.get(name)]
-    return [f"[{name}] differs" for name in tables] or ["input files, command or version differ"]
+    return [f"[{name}] differs" for name in tables] or ["input files or versions differ, or an update was cut short"]
 
 
 def _holds(out: Path, stage: Stage, key: str, record: dict[str, Any]) -> bool:

@@ -21,6 +21,7 @@ from sims.schema import SPECTRA, check, describe
 
 FloatArray = NDArray[np.float64]
 COLUMNS = ("frequency_mhz", "temperature_k", "sigma_k", "bin", "w", "width_mhz")
+POSITIVE = ("frequency_mhz", "sigma_k", "width_mhz")
 SIGMA_AGREEMENT = 0.01
 
 
@@ -81,6 +82,8 @@ def spectra_problems(spectra: xr.Dataset) -> list[str]:
     response = spectra["signal_response"].values
     if np.any(response < 0.0) or np.any(response > 1.5):
         problems.append(f"signal_response must lie within 0 to 1.5, got {response.min():.3g} to {response.max():.3g}")
+    if "response_modes" in spectra and "systematic_modes" not in spectra:
+        problems.append("response_modes go with systematic_modes, and there are none")
     return problems
 
 
@@ -97,7 +100,7 @@ class _Table:
 
 def _read_table(path: Path) -> _Table:
     try:
-        with path.open(newline="", encoding="utf-8") as handle:
+        with path.open(newline="", encoding="utf-8-sig") as handle:
             rows = [(number, row) for number, row in enumerate(csv.reader(handle), start=1)
                     if row and not row[0].lstrip().startswith("#")]  # fmt: skip
     except (OSError, UnicodeDecodeError, csv.Error) as error:
@@ -120,14 +123,23 @@ def _read_table(path: Path) -> _Table:
             if name == "bin":
                 labels.append(cell.strip())
                 continue
-            try:
-                values[name].append(float(cell))
-            except ValueError:
-                problems.append(f"{path}: line {number}, {name}: {cell!r} is not a number")
+            value = _number(cell)
+            values[name].append(value)
+            if not np.isfinite(value) or (name in POSITIVE and value <= 0.0):
+                allowed = "a finite number" + " above 0" * (name in POSITIVE)
+                problems.append(f"{path}: line {number}, {name}: {cell!r} is not {allowed}")
     if len(rows) < 2:
         problems.append(f"{path}: holds a header but no rows")
     raise_if_any(problems)
     return _Table({name: np.array(column) for name, column in values.items()}, labels or ["all"] * (len(rows) - 1))
+
+
+def _number(cell: str) -> float:
+    """Number in a cell; NaN where it is none, and for 1_0, which Python takes for ten but is a slip in a table."""
+    try:
+        return float("nan") if "_" in cell else float(cell)
+    except ValueError:
+        return float("nan")
 
 
 def _from_table(table: _Table, path: Path, covariance: Path | None) -> xr.Dataset:
@@ -145,6 +157,7 @@ def _from_table(table: _Table, path: Path, covariance: Path | None) -> xr.Datase
         twice = int(np.argmax(np.bincount(cell) > 1))
         where = f"{frequency[twice % len(frequency)]} MHz of bin {names[twice // len(frequency)]!r}"
         raise InputError(f"{path}: {where} stands more than once")
+    raise_if_any([f"{path}: {problem}" for problem in _order_problems(columns, row_bin, row_channel, names)])
     variance, modes = _noise(columns, path, covariance)
     shape = (len(names), len(frequency))
 
@@ -154,9 +167,9 @@ def _from_table(table: _Table, path: Path, covariance: Path | None) -> xr.Datase
         return grid.reshape(values.shape[:-1] + shape)
 
     rows = np.ones(len(cell))
-    widths = columns.get("width_mhz", np.gradient(frequency)[row_channel])
-    width = np.zeros(len(frequency))
-    width[row_channel] = widths
+    width = np.gradient(frequency)
+    if "width_mhz" in columns:
+        width[row_channel] = columns["width_mhz"]
     spectra = xr.Dataset(
         {
             "frequency_mhz": ("channel", frequency),
@@ -173,11 +186,30 @@ def _from_table(table: _Table, path: Path, covariance: Path | None) -> xr.Datase
     return describe(spectra, SPECTRA)
 
 
+def _order_problems(
+    columns: dict[str, FloatArray], row_bin: NDArray[np.int64], row_channel: NDArray[np.int64], names: list[str]
+) -> list[str]:
+    """Bins whose frequencies do not rise, and frequencies whose width differs from bin to bin."""
+    problems = []
+    for number, name in enumerate(names):
+        frequency = columns["frequency_mhz"][row_bin == number]
+        falls = np.flatnonzero(np.diff(frequency) < 0.0)
+        if len(falls):
+            before, after = frequency[falls[0]], frequency[falls[0] + 1]
+            problems.append(f"frequency_mhz must rise; in bin {name!r} {after} MHz follows {before} MHz")
+    if "width_mhz" in columns:
+        last = np.zeros(row_channel.max() + 1)
+        last[row_channel] = columns["width_mhz"]
+        differs = columns["width_mhz"] != last[row_channel]
+        if differs.any():
+            at = int(np.argmax(differs))
+            problems.append(f"width_mhz differs between bins at {columns['frequency_mhz'][at]} MHz; allowed is one")
+    return problems
+
+
 def _noise(columns: dict[str, FloatArray], path: Path, covariance: Path | None) -> tuple[FloatArray, FloatArray | None]:
     """Variance of each row, and what correlates the rows as modes."""
     if covariance is None:
-        if np.any(~(columns["sigma_k"] > 0.0)):
-            raise InputError(f"{path}: sigma_k must be positive, got {columns['sigma_k'].min()}")
         return columns["sigma_k"] ** 2, None
     matrix = _read_covariance(covariance, len(columns["frequency_mhz"]))
     if "sigma_k" in columns:

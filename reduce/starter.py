@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from importlib import resources
 from pathlib import Path
 
 from sims.errors import InputError
@@ -13,8 +12,11 @@ STARTER_NAME = "campaign.toml"
 
 
 def starter_text() -> str:
-    """The starter configuration."""
-    return (resources.files("reduce.configs") / STARTER).read_text(encoding="utf-8")
+    """The starter configuration: from the installed package, or from the checkout it is run in."""
+    package = Path(__file__).parent
+    folders = (package / "configs", package.parent / "configs")
+    found = next(folder / STARTER for folder in folders if (folder / STARTER).is_file())
+    return found.read_text(encoding="utf-8")
 
 
 def new(folder: Path) -> Path:

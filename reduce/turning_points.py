@@ -1,7 +1,7 @@
 """Information form -> posterior of the turning points B, C and D, sampled for the record.
 
 An ensemble sampler (emcee; Foreman-Mackey et al. 2013) runs four independent ensembles,
-started from the importance-weighted posterior. Results follow ArviZ's conventions.
+started from the annealed one of `fast_posterior`. Results follow ArviZ's conventions.
 """
 
 from __future__ import annotations
@@ -48,7 +48,7 @@ class Posterior:
     samples : xarray.Dataset
         Variables `trough_model.NAMES` over chain and draw, MHz and mK.
     fast : WeightedPosterior
-        The importance-weighted one it was started from.
+        The annealed one it was started from.
     acceptance : float
         Share of proposals taken.
     """
@@ -165,7 +165,6 @@ def summarise(posterior: Posterior, model: TroughModel) -> dict[str, Any]:
             "split_r_hat": dict(zip(NAMES, r_hat, strict=True)),
             "effective_size": dict(zip(NAMES, effective, strict=True)),
             "acceptance": posterior.acceptance,
-            "importance_effective_size": posterior.fast.effective_size,
             "converged": bool(max(r_hat) < R_HAT_LIMIT and min(effective) > EFFECTIVE_SIZE_LIMIT),
         },
         "flags": _flags(draws, model, cold, r_hat, effective),

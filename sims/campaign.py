@@ -23,7 +23,7 @@ from sims.frequency import ChannelGrid, channel_grid
 from sims.pixel_sum import Pointing
 from sims.receiver import gain, noise_variance_k2, received_k
 from sims.schema import RECORDING, describe
-from sims.sky import DiffuseSky, gaussian_field, sky_from
+from sims.sky import DiffuseSky, gaussian_field, moved_sky, sky_from
 from sims.sky_average import Reached, Scene, SkyAverage, scene_axes, sky_average
 from sims.streams import stream
 from sims.trough import channel_mean_k, flattened_gaussian_k, turning_point_trough_k
@@ -93,7 +93,7 @@ def observe(config: settings.Config, advance: Advance) -> Observed:
     truth = true_draw(config)
     grid = channel_grid(config.channels)
     geometry = survey_geometry(config.vantage, config.observation)
-    sky = true_sky(config, truth)
+    sky = true_sky(config, truth, sky_from(config.sky))
     average = simulate(truth.config, sky, geometry_like(truth.config, geometry, config), grid, advance)
     believed = average.signal_response
     if engine_passes(config) > 1:
@@ -115,9 +115,9 @@ def engine_passes(config: settings.Config) -> int:
     return 1 if same else 2
 
 
-def true_sky(config: settings.Config, truth: Draw) -> DiffuseSky:
+def true_sky(config: settings.Config, truth: Draw, nominal: DiffuseSky) -> DiffuseSky:
     """The mock's true sky: drawn scalars, and drawn fields where ``[knowledge]`` has them."""
-    sky = sky_from(truth.config.sky)
+    sky = moved_sky(nominal, config.sky, truth.config.sky)
     if config.run.truth != "drawn":
         return sky
     seed, known = config.run.seed, config.knowledge

@@ -243,8 +243,9 @@ def _channels_and_sky(channels: Channels, sky: InventedSky | HealpixSky | ImageS
     if sky.valid_from_mhz <= channels.start_mhz and channels.stop_mhz <= sky.valid_to_mhz:
         return []
     return [
-        f"channels.start to channels.stop, {channels.start_mhz} to {channels.stop_mhz} MHz, reach outside sky.valid_from "
-        f"to sky.valid_to, {sky.valid_from_mhz} to {sky.valid_to_mhz} MHz: no map is extrapolated silently"
+        f"channels.start to channels.stop, {channels.start_mhz} to {channels.stop_mhz} MHz, reach outside "
+        f"sky.valid_from to sky.valid_to, {sky.valid_from_mhz} to {sky.valid_to_mhz} MHz; "
+        "nothing is extrapolated silently"
     ]
 
 
@@ -286,9 +287,7 @@ def _channels_and_foreground(channels: Channels, foreground: Foreground) -> list
 def _plane_below_wire(beam: Any) -> list[str]:
     vertical = beam.kind == "dipole" and beam.wire == "vertical" and beam.height_m is not None
     if vertical and beam.height_m < beam.length_m / 2:
-        return [
-            f"beam.height, {beam.height_m} m, puts the lower end of a vertical wire of {beam.length_m} m below the plane"
-        ]
+        return [f"beam.height, {beam.height_m} m, puts the end of a vertical wire of {beam.length_m} m below the plane"]
     return []
 
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 import re
 import tomllib
 from collections.abc import Iterator
+from importlib.util import find_spec
 from pathlib import Path
 from typing import Any, TypeVar, get_type_hints
 
@@ -34,6 +35,7 @@ PLAIN_WORDS = (
     ("valid tuple", "list"),
     ("valid dictionary or (instance of \\w+|object to extract fields from)", "table"),
 )
+PACKAGE_PREFIX = "package:"
 KNOWLEDGE_TABLES = tuple(name for name in Knowledge.model_fields if name != "leaves")
 
 
@@ -252,7 +254,9 @@ def _in_leaf_unit(entry: dict[str, Any], place: Place, where: str) -> tuple[dict
         if key not in entry or place.unit is None or bare:
             continue
         if not isinstance(entry[key], str):
-            wrong.append(f'{where}.{key}: a quantity needs its unit: write "<number> {place.unit.unit}"{_got(entry[key])}')
+            wrong.append(
+                f'{where}.{key}: a quantity needs its unit: write "<number> {place.unit.unit}"{_got(entry[key])}'
+            )
             continue
         try:
             numbers[key] = place.unit.parse_text(entry[key])
@@ -285,7 +289,19 @@ def _with_files(section: Any, name: str, folder: Path, problems: list[str]) -> A
     for field in type(section).model_fields:
         value = getattr(section, field)
         if isinstance(value, Path):
-            found[field] = value if value.is_absolute() else folder / value
+            found[field] = _located(value, folder)
             if not found[field].is_file():
                 problems.append(f"{name}.{field}: no such file (got {str(value)!r}, looked for {found[field]})")
     return section.model_copy(update=found) if found else section
+
+
+def _located(path: Path, folder: Path) -> Path:
+    """Where a file is: as named, beside the configuration, or in an installed package (``package:NAME/path``)."""
+    text = path.as_posix()
+    if text.startswith(PACKAGE_PREFIX):
+        name, _, inside = text.removeprefix(PACKAGE_PREFIX).partition("/")
+        spec = find_spec(name) if name.isidentifier() else None
+        if spec is not None and spec.submodule_search_locations:
+            return Path(next(iter(spec.submodule_search_locations))) / inside
+        return path
+    return path if path.is_absolute() else folder / path

@@ -111,7 +111,9 @@ class Knowledge(Section):
         known = {leaf.path for leaf in self.leaves}
         named = [path for group in self.correlated for path in group.paths]
         problems = [f"correlated path {path!r} has no entry of its own" for path in named if path not in known]
-        problems += [f"{path!r} stands more than once in the groups" for path in sorted(set(named)) if named.count(path) > 1]
+        problems += [
+            f"{path!r} stands more than once in the groups" for path in sorted(set(named)) if named.count(path) > 1
+        ]
         if problems:
             raise ValueError("; ".join(problems))
         return self

@@ -64,12 +64,14 @@ RECORDING: Product = {
 SPECTRA: Product = {
     **_CHANNELS,
     "antenna_temperature_k": Variable(("bin", "channel"), "K", "mean antenna temperature of the bin", finite=False),
-    "noise_variance": Variable(("bin", "channel"), "K2", "variance of its noise, independent between channels", finite=False),
+    "noise_variance": Variable(("bin", "channel"), "K2", "variance of its independent noise", finite=False),
     "signal_response": Variable(("bin", "channel"), "1", "w(f) with which a signal filling the sky reaches the bin"),
     "flag": Variable(("bin", "channel"), "1", "nonzero where not to be used; bit 1: masked channel; bit 2: no data"),
     "weight_s": Variable(("bin",), "s", "integration in the bin", required=False),
     "systematic_modes": Variable(
-        ("mode", "bin", "channel"), "K", "each a common error of one standard deviation: covariance is noise + sum of mode mode'",
+        ("mode", "bin", "channel"),
+        "K",
+        "each a common error of one standard deviation: covariance is noise + sum of mode mode'",
         required=False,
     ),
     "response_modes": Variable(

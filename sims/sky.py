@@ -210,6 +210,34 @@ def sky_from(settings: SkySettings) -> DiffuseSky:
     )
 
 
+def moved_sky(sky: DiffuseSky, before: SkySettings, after: SkySettings) -> DiffuseSky:
+    """The sky of `after`, from that of `before`: without reading the map again where only numbers differ.
+
+    Parameters
+    ----------
+    sky : DiffuseSky
+        From `sky_from(before)`, without drawn fields.
+    before, after : InventedSky or HealpixSky or ImageSky
+        Two settings of the table.
+
+    Returns
+    -------
+    DiffuseSky
+    """
+    numbers = ("index", "curvature", "zero_level_k", "scale", "valid_from_mhz", "valid_to_mhz")
+    if before.model_copy(update={name: getattr(after, name) for name in numbers}) != after:
+        return sky_from(after)
+    return replace(
+        sky,
+        index=sky.index + (after.index - before.index),
+        curvature=after.curvature,
+        zero_level_k=after.zero_level_k,
+        scale=after.scale,
+        valid_from_mhz=after.valid_from_mhz,
+        valid_to_mhz=after.valid_to_mhz,
+    )
+
+
 def diffuse_map_from(settings: SkySettings) -> DiffuseMap:
     """Read or invent the map that ``[sky]`` names.
 

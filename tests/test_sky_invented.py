@@ -83,7 +83,7 @@ def test_variance_over_the_sphere_matches_its_own_spread(fields: NDArray[np.floa
 
 def test_synthesis_has_the_spectrum_it_was_given() -> None:
     lmax, nside = 40, 64
-    spectrum = (np.arange(lmax + 1) + 2.0) ** -2.5
+    spectrum = np.asarray((np.arange(lmax + 1) + 2.0) ** -2.5, dtype=np.float64)
     found = np.zeros(lmax + 1)
     rng = np.random.default_rng(4)
     draws = 20

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from pathlib import Path
+from typing import Any
 
 import healpy
 import numpy as np
@@ -13,6 +15,7 @@ from numpy.typing import NDArray
 
 from sims.errors import InputError
 from sims.sky_images import read_image
+from sims.sky_map_checks import Frame
 from sims.sky_maps import (
     pixel_directions,
     read_healpix_map,
@@ -21,21 +24,35 @@ from sims.sky_maps import (
     turn_directions,
 )
 
+Values = NDArray[np.float64]
 NSIDE = 16
-HEALPIX = {"field": 0, "ordering": "header", "frame": "galactic", "unit": "K", "missing": "refuse", "nside": NSIDE}
-IMAGE = {"frame": "galactic", "unit": "K", "missing": "refuse", "nside": 16}
+HEALPIX: dict[str, Any] = {
+    "field": 0,
+    "ordering": "header",
+    "frame": "galactic",
+    "unit": "K",
+    "missing": "refuse",
+    "nside": NSIDE,
+}
+IMAGE: dict[str, Any] = {"frame": "galactic", "unit": "K", "missing": "refuse", "nside": 16}
 
 
-def smooth_sky(vectors: NDArray[np.float64]) -> NDArray[np.float64]:
+def smooth_sky(vectors: Values) -> Values:
     """A smooth positive pattern without symmetry; its mean over the sphere is 30 + 3/3 K exactly."""
     x, y, z = vectors.T
-    return 30.0 + 8.0 * x - 5.0 * y + 4.0 * z + 2.0 * x * y + 3.0 * z**2
+    return np.asarray(30.0 + 8.0 * x - 5.0 * y + 4.0 * z + 2.0 * x * y + 3.0 * z**2)
 
 
-def write_healpix(path: Path, values: NDArray[np.float64], drop: tuple[str, ...] = (), **keys: object) -> Path:
+def write_healpix(path: Path, values: Values, drop: tuple[str, ...] = (), **keys: Any) -> Path:
     """Write one column, by astropy alone, so that the reader is not tested with its own library."""
     table = fits.BinTableHDU.from_columns([fits.Column(name="T", format="D", array=values)])
-    header = {"PIXTYPE": "HEALPIX", "ORDERING": "RING", "COORDSYS": "G", "TUNIT1": "K", "INDXSCHM": "IMPLICIT"}
+    header: dict[str, Any] = {
+        "PIXTYPE": "HEALPIX",
+        "ORDERING": "RING",
+        "COORDSYS": "G",
+        "TUNIT1": "K",
+        "INDXSCHM": "IMPLICIT",
+    }
     for key, value in {**header, **keys}.items():
         if key not in drop:
             table.header[key] = value
@@ -43,11 +60,11 @@ def write_healpix(path: Path, values: NDArray[np.float64], drop: tuple[str, ...]
     return path
 
 
-def write_image(path: Path, values: NDArray[np.float64], drop: tuple[str, ...] = (), **keys: object) -> Path:
+def write_image(path: Path, values: Values, drop: tuple[str, ...] = (), **keys: Any) -> Path:
     hdu = fits.PrimaryHDU(values)
     rows, columns = values.shape[-2:]
     step = 180.0 / (rows - 1)
-    header = {
+    header: dict[str, Any] = {
         "CTYPE1": "GLON-CAR", "CRVAL1": 0.0, "CRPIX1": (columns + 1) / 2, "CDELT1": -step,
         "CTYPE2": "GLAT-CAR", "CRVAL2": 0.0, "CRPIX2": (rows + 1) / 2, "CDELT2": step, "BUNIT": "K",
     }  # fmt: skip
@@ -58,7 +75,7 @@ def write_image(path: Path, values: NDArray[np.float64], drop: tuple[str, ...] =
     return path
 
 
-def image_values(rows: int = 91) -> NDArray[np.float64]:
+def image_values(rows: int = 91) -> Values:
     """`smooth_sky` on rows from pole to pole, columns from +180 to -180 deg, the last repeating the first."""
     columns = 2 * (rows - 1) + 1
     longitude, latitude = np.meshgrid(np.linspace(180.0, -180.0, columns), np.linspace(-90.0, 90.0, rows))
@@ -66,13 +83,13 @@ def image_values(rows: int = 91) -> NDArray[np.float64]:
     return smooth_sky(vectors).reshape(rows, columns)
 
 
-def ring_values(nside: int = NSIDE) -> NDArray[np.float64]:
+def ring_values(nside: int = NSIDE) -> Values:
     return smooth_sky(pixel_directions(nside, "icrs"))
 
 
-def problems_of(call: object, *args: object, **kwargs: object) -> tuple[str, ...]:
+def problems_of(call: Callable[..., object], *args: Any, **kwargs: Any) -> tuple[str, ...]:
     with pytest.raises(InputError) as caught:
-        call(*args, **kwargs)  # type: ignore[operator]
+        call(*args, **kwargs)
     return caught.value.problems
 
 
@@ -168,10 +185,10 @@ def test_image_hole_is_filled_and_counted(tmp_path: Path) -> None:
 
 
 @pytest.mark.parametrize("frame", ["galactic", "fk5", "fk4", "icrs"])
-def test_directions_agree_with_astropy(frame: str) -> None:
+def test_directions_agree_with_astropy(frame: Frame) -> None:
     longitude, latitude = healpy.pix2ang(8, np.arange(768), lonlat=True)
     expected = SkyCoord(longitude, latitude, unit="deg", frame=frame).icrs.cartesian.xyz.value.T
-    found = pixel_directions(8, frame)  # type: ignore[arg-type]
+    found = pixel_directions(8, frame)
     assert found.flags.c_contiguous
     assert np.abs(found - expected).max() < 1e-9  # both double precision; FK4 iterates its aberration to that
     assert np.abs(np.linalg.norm(found, axis=1) - 1.0).max() < 1e-14
@@ -202,7 +219,7 @@ def test_index_map_same_grid_other_frame_and_finer(tmp_path: Path) -> None:
     assert error.max() < 0.15 * np.sqrt(2 / 3) / NSIDE * (1 - np.sqrt(0.5))
 
 
-BAD_HEALPIX = {
+BAD_HEALPIX: dict[str, tuple[dict[str, Any], dict[str, Any], str]] = {
     "contradicted ordering": ({}, {"ordering": "nested"}, "ORDERING"),
     "no ordering": ({"drop": ("ORDERING",)}, {}, "ORDERING"),
     "unknown ordering": ({"ORDERING": "SPIRAL"}, {}, "ORDERING"),
@@ -224,7 +241,7 @@ BAD_HEALPIX = {
 @pytest.mark.parametrize("name", BAD_HEALPIX)
 def test_bad_healpix_files_are_refused(tmp_path: Path, name: str) -> None:
     keys, declared, word = BAD_HEALPIX[name]
-    path = write_healpix(tmp_path / "a.fits", ring_values(), **keys)  # type: ignore[arg-type]
+    path = write_healpix(tmp_path / "a.fits", ring_values(), **keys)
     (problem,) = problems_of(read_healpix_map, path, **{**HEALPIX, **declared})
     assert "a.fits" in problem
     assert word in problem
@@ -269,12 +286,16 @@ def test_files_that_are_not_whole_fits_are_refused(tmp_path: Path, kind: str) ->
         path.write_bytes(path.read_bytes()[:12000])
     elif kind == "directory":
         path.mkdir()
-    for reader, declared in ((read_healpix_map, HEALPIX), (read_image_map, IMAGE)):
+    readers: tuple[tuple[Callable[..., object], dict[str, Any]], ...] = (
+        (read_healpix_map, HEALPIX),
+        (read_image_map, IMAGE),
+    )
+    for reader, declared in readers:
         (problem,) = problems_of(reader, path, **declared)
         assert "a.fits" in problem
 
 
-BAD_IMAGES = {
+BAD_IMAGES: dict[str, tuple[Callable[[Values], Values], dict[str, Any], dict[str, Any], str]] = {
     "half the longitudes": (lambda v: v[:, :91], {"CRPIX1": 91.0}, {}, "CDELT1"),
     "north only": (lambda v: v[45:], {"CRPIX2": 1.0, "CDELT2": 2.0, "CDELT1": -2.0}, {}, "pole to pole"),
     "shifted off the poles": (lambda v: v, {"CRPIX2": 40.0}, {}, "pole to pole"),
@@ -293,7 +314,7 @@ BAD_IMAGES = {
 @pytest.mark.parametrize("name", BAD_IMAGES)
 def test_bad_images_are_refused(tmp_path: Path, name: str) -> None:
     change, keys, declared, word = BAD_IMAGES[name]
-    path = write_image(tmp_path / "a.fits", change(image_values()), **keys)  # type: ignore[no-untyped-call]
+    path = write_image(tmp_path / "a.fits", change(image_values()), **keys)
     found = problems_of(read_image_map, path, **{**IMAGE, **declared})
     assert any(word in problem for problem in found), found
     assert all("a.fits" in problem for problem in found)
@@ -307,8 +328,8 @@ def test_bad_images_are_refused(tmp_path: Path, name: str) -> None:
         ({"RADESYS": "FK5"}, "icrs", "RADESYS"),
     ],
 )
-def test_equatorial_systems_are_told_apart(tmp_path: Path, keys: dict[str, object], frame: str, word: str) -> None:
-    path = write_image(tmp_path / "a.fits", image_values(), CTYPE1="RA---CAR", CTYPE2="DEC--CAR", **keys)  # type: ignore[arg-type]
+def test_equatorial_systems_are_told_apart(tmp_path: Path, keys: dict[str, Any], frame: str, word: str) -> None:
+    path = write_image(tmp_path / "a.fits", image_values(), CTYPE1="RA---CAR", CTYPE2="DEC--CAR", **keys)
     found = problems_of(read_image_map, path, **{**IMAGE, "frame": frame})
     assert any(word in problem for problem in found), found
 
@@ -317,7 +338,7 @@ def test_equatorial_systems_are_told_apart(tmp_path: Path, keys: dict[str, objec
     ("keys", "scale", "word"),
     [({}, -1.0, "sign"), ({"drop": ("COORDSYS",)}, 1.0, "COORDSYS"), ({"drop": ("ORDERING",)}, 1.0, "ORDERING")],
 )
-def test_bad_index_maps_are_refused(tmp_path: Path, keys: dict[str, object], scale: float, word: str) -> None:
-    path = write_healpix(tmp_path / "a.fits", scale * np.full(3072, 2.5), TUNIT1="", **keys)  # type: ignore[arg-type]
+def test_bad_index_maps_are_refused(tmp_path: Path, keys: dict[str, Any], scale: float, word: str) -> None:
+    path = write_healpix(tmp_path / "a.fits", scale * np.full(3072, 2.5), TUNIT1="", **keys)
     (problem,) = problems_of(read_index_map, path, nside=NSIDE, frame="galactic")
     assert word in problem

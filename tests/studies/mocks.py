@@ -12,12 +12,12 @@ from pathlib import Path
 
 import numpy as np
 import xarray as xr
+
+from reduce.binning import bin_of_each_sample, mean_by_bin
 from reduce.fast_posterior import detection_statistic
 from reduce.joint_fit import joint_fit
 from reduce.knowledge_modes import knowledge_modes, thinned
-from reduce.binning import bin_of_each_sample, mean_by_bin
 from reduce.trough_model import TroughModel, trough_model
-
 from sims.campaign import geometry_like, simulate, true_sky
 from sims.config import Config
 from sims.config_load import load_config
@@ -25,6 +25,7 @@ from sims.draws import draw
 from sims.frequency import ChannelGrid, channel_grid
 from sims.receiver import gain, noise_variance_k2, received_k
 from sims.schema import SPECTRA, describe
+from sims.sky import DiffuseSky, sky_from
 from sims.streams import stream
 from sims.vantage import survey_geometry
 
@@ -36,6 +37,7 @@ class Bench:
     """What all mocks share: the nominal campaign on thinned samples, and what its team believes."""
 
     config: Config
+    sky: DiffuseSky
     grid: ChannelGrid
     geometry: xr.Dataset
     bin_seconds: np.ndarray
@@ -50,7 +52,6 @@ class Result:
     """One mock reduced."""
 
     rank: np.ndarray
-    effective_size: float
     statistic: float
     chi_squared: float
     degrees_of_freedom: int
@@ -71,10 +72,12 @@ def make_bench(config: Config | None = None) -> Bench:
     label = bin_of_each_sample(everything, config.bins)
     on_antenna_s = everything["integration_s"].values * config.observation.duty_cycle
     geometry = thinned(everything, config)
-    nominal = simulate(config, true_sky(config, draw(config, "unused")), geometry, grid, quiet)
+    sky = sky_from(config.sky)
+    nominal = simulate(config, sky, geometry, grid, quiet)
     modes = knowledge_modes(config, quiet)
     return Bench(
         config=config,
+        sky=sky,
         grid=grid,
         geometry=geometry,
         bin_seconds=np.bincount(label, on_antenna_s, minlength=config.bins.count),
@@ -91,7 +94,7 @@ def mock_spectra(bench: Bench, index: int, *, signal: bool) -> tuple[xr.Dataset,
     seed = config.run.seed
     truth = draw(config, "coverage", index)
     fields = config.model_copy(update={"run": config.run.model_copy(update={"seed": seed + 1 + index})})
-    sky = true_sky(fields, truth)
+    sky = true_sky(fields, truth, bench.sky)
     average = simulate(truth.config, sky, geometry_like(truth.config, bench.geometry, config), grid, quiet)
     foreground = mean_by_bin(average.antenna_temperature_k, bench.geometry, config.bins)
     response = mean_by_bin(average.signal_response, bench.geometry, config.bins)
@@ -99,7 +102,8 @@ def mock_spectra(bench: Bench, index: int, *, signal: bool) -> tuple[xr.Dataset,
     parameters = bench.model.draw_prior(rng, 1)[0]
     signal_k = bench.model.signal_k(parameters) if signal else np.zeros(grid.count)
     antenna = foreground + response * signal_k
-    variance = noise_variance_k2(antenna, truth.config.receiver.temperature_k, grid.width_mhz, bench.bin_seconds[:, None])
+    seconds = bench.bin_seconds[:, None]
+    variance = noise_variance_k2(antenna, truth.config.receiver.temperature_k, grid.width_mhz, seconds)
     antenna = antenna + np.sqrt(variance) * rng.standard_normal(antenna.shape)
     measured = received_k(antenna, grid.centre_mhz, truth.config.receiver)
     spectra = xr.Dataset(
@@ -109,7 +113,7 @@ def mock_spectra(bench: Bench, index: int, *, signal: bool) -> tuple[xr.Dataset,
             "antenna_temperature_k": (("bin", "channel"), measured),
             "noise_variance": (
                 ("bin", "channel"),
-                noise_variance_k2(measured, config.receiver.temperature_k, grid.width_mhz, bench.bin_seconds[:, None]),
+                noise_variance_k2(measured, config.receiver.temperature_k, grid.width_mhz, seconds),
             ),
             "signal_response": (("bin", "channel"), bench.response),
             "flag": (("bin", "channel"), np.broadcast_to(grid.masked.astype(np.uint8), measured.shape)),
@@ -128,7 +132,6 @@ def reduce_mock(bench: Bench, index: int, *, signal: bool) -> Result:
     posterior = fit.posterior
     return Result(
         rank=posterior.rank(truth),
-        effective_size=posterior.effective_size,
         statistic=detection_statistic(posterior.mean(), posterior.covariance()),
         chi_squared=fit.information.chi_squared_min,
         degrees_of_freedom=fit.information.degrees_of_freedom,
@@ -136,4 +139,3 @@ def reduce_mock(bench: Bench, index: int, *, signal: bool) -> Result:
         covariance=posterior.covariance(),
         truth=truth,
     )
-

@@ -1,0 +1,52 @@
+"""Configurations for tests: the demo by text substitution, whole or shrunk to seconds."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from pathlib import Path
+
+from sims.config import Config
+from sims.config_load import load_config
+
+DEMO = (Path(__file__).parents[1] / "configs" / "demo.toml").read_text(encoding="utf-8")
+
+# Nside 8, 16 channels and a sample every four hours: each sample has a pointing of its own, about 30 are kept.
+_SHRINK = (
+    ("count = 256", "count = 16"),
+    ("nside = 64", "nside = 8"),
+    ('step = "120 s"', 'step = "14400 s"'),
+    ("count = 22300", "count = 250"),
+    ("nodes = 20", "nodes = 12"),
+    ("walkers = 160", "walkers = 64"),
+    ("steps = 1600", "steps = 100"),
+)
+
+
+def substituted(text: str, changes: Sequence[tuple[str, str]]) -> str:
+    """`text` with each change made once; a change that finds nothing is a mistake in the test."""
+    for old, new in changes:
+        assert old in text, old
+        text = text.replace(old, new, 1)
+    return text
+
+
+def demo_with(*changes: tuple[str, str]) -> str:
+    """The demo's text with changes."""
+    return substituted(DEMO, changes)
+
+
+def small_with(*changes: tuple[str, str]) -> str:
+    """The demo's text, shrunk, with changes."""
+    return substituted(substituted(DEMO, _SHRINK), changes)
+
+
+def with_knowledge(text: str, *lines: str) -> str:
+    """`text` with these lines in place of everything from ``[knowledge]`` on."""
+    return "\n".join([text[: text.index("[knowledge]")], *lines, ""])
+
+
+def load_text(text: str, folder: Path) -> Config:
+    """Configuration from text, through a file in `folder`."""
+    path = folder / "campaign.toml"
+    path.write_text(text, encoding="utf-8")
+    return load_config(path)
