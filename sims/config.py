@@ -287,7 +287,9 @@ def _channels_and_foreground(channels: Channels, foreground: Foreground) -> list
 def _plane_below_wire(beam: Any) -> list[str]:
     vertical = beam.kind == "dipole" and beam.wire == "vertical" and beam.height_m is not None
     if vertical and beam.height_m < beam.length_m / 2:
-        return [f"beam.height, {beam.height_m} m, puts the end of a vertical wire of {beam.length_m} m below the plane"]
+        return [
+            f"beam.height, {beam.height_m:g} m, puts the end of a vertical wire of {beam.length_m:g} m below the plane"
+        ]
     return []
 
 

@@ -95,7 +95,7 @@ def _build(tree: dict[str, Any], model: type[Model], folder: Path) -> Model:
     sections: dict[str, Any] = {}
     for name, field in model.model_fields.items():
         if name == "knowledge":
-            sections[name] = _knowledge(tree.get(name, {}), top, set(tree) - set(sections), problems)
+            sections[name] = _knowledge(tree.get(name, {}), top, set(hints) - set(sections), problems)
         elif name in tree:
             _judge(hints[name], tree[name], descend(top, name), sections, problems)
         elif field.is_required():

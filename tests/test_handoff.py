@@ -76,7 +76,7 @@ def test_log_likelihood_of_the_bundle_equals_that_of_all_bins(
 def test_information_form_is_its_own_square_root(case: tuple[xr.Dataset, JointFit, TroughModel]) -> None:
     information = case[1].information
     scale = np.abs(information.K).max()
-    assert information.R.T @ information.R == pytest.approx(information.K, abs=1e-12 * scale)
+    assert pytest.approx(information.K, abs=1e-12 * scale) == information.R.T @ information.R
     assert information.R.T @ information.z == pytest.approx(information.b, abs=1e-9 * np.abs(information.b).max())
 
 

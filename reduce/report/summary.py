@@ -70,7 +70,7 @@ def _observed(products: Products, config: FitConfig) -> list[str]:
     more = f" ({empty} more without data)" if empty else ""
     low, high = frequency[0] - width[0] / 2.0, frequency[-1] + width[-1] / 2.0
     lines = [
-        f"{len(bins)} bins{by}{more}, {len(frequency)} channels from {low:.6g} to {high:.6g} MHz, {unused} never used"
+        f"{len(bins)} bin{'s' if len(bins) > 1 else ''}{by}{more}, {len(frequency)} channels from {low:.6g} to {high:.6g} MHz, {unused} never used"
     ]
     if isinstance(config, Config):
         lines.append(

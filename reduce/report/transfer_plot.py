@@ -64,7 +64,9 @@ def measured_shapes(root: FloatArray, signals_k: FloatArray) -> MeasuredShapes:
     MeasuredShapes
         With R A = U diag(d) V': shapes A v, measured d times better than the prior knows them.
     """
-    spread_k = (signals_k - signals_k.mean(axis=0)).T / np.sqrt(len(signals_k) - 1.0)
+    # Draws far outnumber channels; the triangle of their QR has the same covariance and is small.
+    triangle = np.linalg.qr((signals_k - signals_k.mean(axis=0)) / np.sqrt(len(signals_k) - 1.0), mode="r")
+    spread_k = triangle.T
     _, signal_to_noise, across = np.linalg.svd(root @ spread_k, full_matrices=False)
     shape_k = (spread_k @ across.T).T
     peak = np.abs(shape_k).argmax(axis=1)

@@ -1,6 +1,6 @@
 """Full statistical study: coverage of the turning points, and false alarms without a signal.
 
-Run it as ``python tests/studies/coverage.py --mocks 1000``; it prints the table that
+Run it as ``python tests/studies/coverage_study.py --mocks 1000``; it prints the table that
 DEVELOPERS.md quotes. With ``--processes 2`` it takes about two seconds a mock on two cores.
 """
 
