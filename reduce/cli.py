@@ -1,7 +1,7 @@
 """The command ``quietlimb``: a thin skin over the plain functions, the last file of the flow.
 
-Exit codes: 0 done; 2 the input is at fault, and nothing of the user's was touched; 1 the
-program is at fault or a fit did not converge.
+Exit codes: 0 done; 2 the input is at fault, and nothing was overwritten but what ``--update``
+had asked for before that came to light; 1 the program is at fault or a fit did not converge.
 """
 
 from __future__ import annotations
@@ -30,7 +30,7 @@ app = typer.Typer(
         "From radiometer spectra of the low-frequency sky to the turning points of the cosmic-dawn trough.\n\n"
         "Begin with `quietlimb new DIR`, look at what it wrote, `quietlimb check DIR/campaign.toml`, then "
         "`quietlimb run DIR/campaign.toml --out DIR/out`.\n\n"
-        "Exit codes: 0 done; 2 bad input, nothing was overwritten; 1 anything else."
+        "Exit codes: 0 done; 2 bad input, nothing was overwritten unless --update asked for it; 1 anything else."
     ),
 )
 
@@ -96,7 +96,7 @@ def fit(
 
 @app.command()
 def check(config: ConfigFile) -> None:
-    """Judge a configuration: all its errors, or what a run of it would be like.
+    """Judge a configuration: its errors, or what to expect of a run.
 
     Prints every value as resolved, the geometry, the noise to expect, time and memory.
     Writes nothing.
@@ -143,17 +143,22 @@ def _complaints() -> Iterator[None]:
 
 @contextmanager
 def _bars():  # type: ignore[no-untyped-def]
-    """Progress bars on standard error, one a long step."""
+    """Progress bars on standard error, one a long step; where none is asked for, nothing is written."""
     columns = (TextColumn("{task.description:28}"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
-    with Bars(*columns, console=Console(stderr=True)) as bars:
+    bars = Bars(*columns, console=Console(stderr=True))
 
-        @contextmanager
-        def bar(title: str, total: int):  # type: ignore[no-untyped-def]
-            task = bars.add_task(title, total=total)
-            yield lambda done: bars.advance(task, done)
-            bars.update(task, completed=total)
+    @contextmanager
+    def bar(title: str, total: int):  # type: ignore[no-untyped-def]
+        bars.start()
+        task = bars.add_task(title, total=total)
+        yield lambda done: bars.advance(task, done)
+        bars.update(task, completed=total)
 
+    try:
         yield bar
+    finally:
+        if bars.tasks:
+            bars.stop()
 
 
 def _closing(summary: str, folder: Path, redone: tuple[str, ...], reused: tuple[str, ...]) -> None:

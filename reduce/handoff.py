@@ -101,7 +101,8 @@ def combined_spectrum_text(packed: xr.Dataset) -> str:
     """
     spectrum = projected_spectrum(information_from(packed), DRAWN_ERROR_K)
     sigma = np.sqrt(np.diag(spectrum.covariance_k2))
-    lines = [
+    lines = ["# INVENTED sky and campaign: true of no sky."] if packed.attrs.get("sky") == "invented" else []
+    lines += [
         "# Signal common to all bins, projected: for looking at, not to be fitted.",
         f"# Drawn are {spectrum.kept} of {spectrum.directions} directions: known to {DRAWN_ERROR_K:g} K or better;",
         "# the others, which the foreground model imitates, are set to zero. Errors are correlated.",

@@ -48,7 +48,7 @@ def observe_campaign(products: Products, config: FitConfig, tools: Tools) -> Mad
             response_modes=(("mode", "bin", "channel"), modes.response),
         )
         spectra.attrs["mode_names"] = list(modes.names)
-    truth = observed.truth
+    truth = observed.truth.assign_attrs(sky=config.sky.kind)
     binned = truth.drop_vars(["foreground_k", "signal_response"]).assign(
         {
             name: (("bin", "channel"), mean_by_bin(truth[name].values, observed.recording, config.bins))
@@ -75,12 +75,14 @@ def subtract_foreground(products: Products, config: FitConfig, tools: Tools) -> 
 def find_turning_points(products: Products, config: FitConfig, tools: Tools) -> Made:
     """Bundle -> posterior of B, C and D."""
     packed = products.dataset("bundle.nc")
-    model = _model(packed, config)
+    model, information = _model(packed, config), information_from(packed)
     with tools.progress("sampling turning points", 4 * config.turning_points.steps) as advance:
         posterior = sample_posterior(
-            information_from(packed), model, config.turning_points, stream(config.run.seed, "posterior"), advance
+            information, model, config.turning_points, stream(config.run.seed, "posterior"), advance
         )
-    return {"posterior.nc": posterior.samples, "turning_points.json": summarise(posterior, model)}
+    sky = packed.attrs.get("sky", "measured")
+    found = {"campaign": config.run.name, "sky": sky, **summarise(posterior, model, information)}
+    return {"posterior.nc": posterior.samples.assign_attrs(sky=sky), "turning_points.json": found}
 
 
 def write_spectrum(products: Products, config: FitConfig, tools: Tools) -> Made:

@@ -65,7 +65,11 @@ def _resolved(config: Config) -> str:
 def _leaves(table: dict[str, Any], before: str = "") -> list[tuple[str, Any]]:
     found: list[tuple[str, Any]] = []
     for key, value in table.items():
-        if isinstance(value, dict):
+        if key == "leaves":
+            found += [
+                (leaf["path"], {k: v for k, v in leaf.items() if k != "path" and v is not None}) for leaf in value
+            ]
+        elif isinstance(value, dict):
             found += _leaves(value, f"{before}{key}.")
         else:
             found.append((f"{before}{key}", value))

@@ -15,6 +15,7 @@ import emcee
 import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
+from scipy import stats
 
 from reduce.combine import Information
 from reduce.fast_posterior import WeightedPosterior, detection_statistic, fast_posterior, prior_bank
@@ -36,6 +37,7 @@ EFFECTIVE_SIZE_LIMIT = 400
 EDGE_MARGIN = 0.05
 EDGE_MASS = 0.025
 COLD_LIMIT = 0.01
+MISFIT_PROBABILITY = 1e-3
 INTERVALS = {"68": (0.16, 0.84), "95": (0.025, 0.975)}
 
 
@@ -131,24 +133,28 @@ def _run_ensemble(
     return np.swapaxes(chain, 0, 1), float(np.mean(sampler.acceptance_fraction))
 
 
-def summarise(posterior: Posterior, model: TroughModel) -> dict[str, Any]:
+def summarise(posterior: Posterior, model: TroughModel, information: Information) -> dict[str, Any]:
     """What is written to ``turning_points.json``.
 
     Parameters
     ----------
     posterior : Posterior
     model : TroughModel
+    information : Information
+        What was sampled.
 
     Returns
     -------
     dict
         For each of B, C, D: median and intervals of frequency and temperature, share of
         draws colder than gas can be. The 6x6 covariance, split R-hat (Vehtari et al.
-        2021) and effective sizes, flags in words, and the detection statistic.
+        2021) and effective sizes, how well the best trough fits, flags in words, and the
+        detection statistic.
     """
     draws = posterior.stacked()
     covariance = np.cov(draws.T)
     r_hat, effective = _convergence(posterior)
+    fit = _best_fit(draws, model, information)
     cold = model.colder_than_gas(draws).mean(axis=0)
     points = {}
     for number, point in enumerate(POINTS):
@@ -167,7 +173,8 @@ def summarise(posterior: Posterior, model: TroughModel) -> dict[str, Any]:
             "acceptance": posterior.acceptance,
             "converged": bool(max(r_hat) < R_HAT_LIMIT and min(effective) > EFFECTIVE_SIZE_LIMIT),
         },
-        "flags": _flags(draws, model, cold, r_hat, effective),
+        "best_trough": fit,
+        "flags": _flags(draws, model, cold, r_hat, effective, fit),
         "prior": dict(zip(NAMES, np.stack([model.lower, model.upper], axis=1).tolist(), strict=True)),
     }  # fmt: skip
 
@@ -195,10 +202,32 @@ def _convergence(posterior: Posterior) -> tuple[list[float], list[float]]:
     return r_hat, effective
 
 
+def _best_fit(draws: FloatArray, model: TroughModel, information: Information) -> dict[str, float]:
+    """Chi-squared of all bins under the best of the draws, and the chance of a larger one."""
+    misfit = -2.0 * float(information.log_likelihood(model.signal_k(draws)).max())
+    chi_squared = information.chi_squared_min + misfit
+    freedom = information.degrees_of_freedom + len(information.z) - len(NAMES)
+    return {
+        "chi_squared": chi_squared,
+        "degrees_of_freedom": freedom,
+        "probability": float(stats.chi2.sf(chi_squared, freedom)),
+    }
+
+
 def _flags(
-    draws: FloatArray, model: TroughModel, cold: FloatArray, r_hat: list[float], effective: list[float]
+    draws: FloatArray,
+    model: TroughModel,
+    cold: FloatArray,
+    r_hat: list[float],
+    effective: list[float],
+    fit: dict[str, float],
 ) -> list[str]:
     flags = []
+    if fit["probability"] < MISFIT_PROBABILITY:
+        flags.append(
+            f"no trough of this shape fits: chi-squared {fit['chi_squared']:.1f} of {fit['degrees_of_freedom']:.0f} at "
+            f"the best of them (chance {fit['probability']:.1g}); the stated errors are then too small"
+        )
     width = model.upper - model.lower
     for number, name in enumerate(NAMES):
         below = np.mean(draws[:, number] < model.lower[number] + EDGE_MARGIN * width[number])

@@ -232,5 +232,5 @@ def _truth(truth: Draw, grid: ChannelGrid, average: SkyAverage, signal_k: FloatA
             "foreground_k": (("time", "channel"), average.antenna_temperature_k),
             "signal_response": (("time", "channel"), average.signal_response),
         },
-        attrs={"drawn_values": json.dumps(truth.values), "configuration": truth.config.model_dump_json()},
+        attrs={"drawn_values": json.dumps(truth.values), "true_configuration": truth.config.model_dump_json()},
     )

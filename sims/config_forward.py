@@ -34,6 +34,8 @@ def _utc(value: Any) -> Any:
 FilePath = Annotated[Path, BeforeValidator(_path)]
 Utc = Annotated[datetime, BeforeValidator(_utc)]
 Frame = Literal["galactic", "icrs", "fk5", "fk4"]
+EARLIEST = datetime(1973, 1, 2, tzinfo=UTC)  # IERS tables start here
+LATEST = datetime(2100, 1, 1, tzinfo=UTC)  # ERFA's series for the Earth and the Moon end here
 Nside = Literal[4, 8, 16, 32, 64, 128, 256, 512]
 
 
@@ -213,6 +215,16 @@ class Observation(Section):
     integration_hours: Hours = Field(gt=0)
     duty_cycle: float = Field(gt=0, le=1)
     require: tuple[Literal["earth-hidden", "sun-hidden"], ...] = ()
+
+    @model_validator(mode="after")
+    def _within_ephemerides(self) -> Self:
+        left_s = (LATEST - self.start).total_seconds()
+        if self.start < EARLIEST or self.step_s * self.count > left_s:
+            raise ValueError(
+                f"start, {self.start:%Y-%m-%d}, and count x step, {self.count} x {self.step_s:g} s, must lie within "
+                f"{EARLIEST:%Y-%m-%d} to {LATEST:%Y-%m-%d}, where ephemerides and Earth rotation hold"
+            )
+        return self
 
 
 class Receiver(Section):

@@ -67,11 +67,20 @@ def with_leaves(config: Config, values: dict[str, float]) -> Config:
     except ValidationError as error:
         raise InputError(
             [
-                f"knowledge: a drawn value of {'.'.join(map(str, item['loc']))} is not allowed ({item['msg']}); "
+                f"knowledge: a drawn value of {_leaf_at(item['loc'], values)} is not allowed ({item['msg']}); "
                 "give the distribution a lower or upper bound"
                 for item in error.errors()
             ]
         ) from None
+
+
+def _leaf_at(location: tuple[str | int, ...], values: dict[str, float]) -> str:
+    """The leaf, with its value, that an error of the models is about; their location also names kinds."""
+    for path, value in values.items():
+        rest = iter([str(step) for step in location])
+        if all(step in rest for step in path.split(".")):
+            return f"{path}, {value:g},"
+    return ".".join(str(step) for step in location) or "one of " + ", ".join(values)
 
 
 def draw(config: Config, name: str, index: int = 0) -> Draw:

@@ -24,7 +24,7 @@ _SHRINK = (
 
 
 def substituted(text: str, changes: Sequence[tuple[str, str]]) -> str:
-    """`text` with each change made once; ``*`` stands for any value. One that finds nothing is a mistake in the test."""
+    """`text` with each change made once; ``*`` stands for any value. Finding nothing is a mistake in the test."""
     for old, new in changes:
         pattern = re.escape(old).replace(r"\*", r"\S+")
         text, made = re.subn(pattern, lambda _, to=new: to, text, count=1)

@@ -100,6 +100,21 @@ def test_times_are_utc_whatever_the_offset(written: str, read: datetime, tmp_pat
     assert config.observation.start.utcoffset() == UTC.utcoffset(None)
 
 
+@pytest.mark.parametrize(
+    "changes",
+    [
+        [("start = 2027-", "start = 1430-")],  # 584.6 years of int64 nanoseconds earlier than 2014
+        [("start = 2027-", "start = 2099-12-31T23:59:59Z # ")],
+        [('step = "120 s"', 'step = "1e12 s"')],
+        [("count = 22300", "count = 9999999"), ('step = "120 s"', 'step = "1 h"')],
+    ],
+)
+def test_samples_lie_where_the_ephemerides_hold(changes: list[tuple[str, str]], tmp_path: Path) -> None:
+    line = only_problem(demo_with(*changes), tmp_path)
+    assert line.startswith("observation: start, ")
+    assert "1973-01-02 to 2100-01-01" in line
+
+
 def test_files_are_found_beside_the_configuration(tmp_path: Path) -> None:
     (tmp_path / "trough.csv").write_text("frequency_mhz,temperature_k\n")
     start = DEMO.index("[signal]")
@@ -123,7 +138,7 @@ def test_fit_needs_its_own_sections_only(tmp_path: Path) -> None:
     path.write_text(DEMO)
     assert type(load_fit_config(path)) is Config
     path.write_text(run + reduction + "[surface]\nreflection = true\n")
-    with pytest.raises(InputError, match="surface.temperature: missing"):
+    with pytest.raises(InputError, match=r"surface\.temperature: missing"):
         load_fit_config(path)
 
 

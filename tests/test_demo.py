@@ -15,7 +15,7 @@ from reduce.handoff import information_from
 from reduce.pipeline import STAGES, run
 from reduce.trough_model import NAMES
 from sims.errors import InputError
-from sims.products import read_product
+from sims.products import read_netcdf, read_product
 from sims.schema import BUNDLE, SPECTRA, TRUTH
 
 README = Path(__file__).parents[1] / "README.md"
@@ -50,6 +50,10 @@ def test_demo_makes_everything_and_finds_what_was_put_in(demo: Path) -> None:
     covariance = np.array(result["covariance"]["matrix"])
     # Six numbers at three standard deviations each: a fair posterior fails this once in sixty demos.
     assert np.all(np.abs(off) < 3 * np.sqrt(np.diag(covariance))), dict(zip(NAMES, off, strict=True))
+    for dataset in (spectra, bundle, read_netcdf(demo / "posterior.nc"), read_netcdf(demo / "truth.nc")):
+        assert dataset.attrs["sky"] == "invented"
+        assert {"configuration", "versions", "seed"} <= set(dataset.attrs)
+    assert result["sky"] == "invented"
     information = information_from(bundle)
     # Chi-squared at the best signal, five of its own standard deviations wide.
     freedom = information.degrees_of_freedom

@@ -102,6 +102,7 @@ def test_combined_spectrum_says_it_is_projected(case: tuple[xr.Dataset, JointFit
     text = combined_spectrum_text(bundle(case[0], case[1]))
     header = [line for line in text.splitlines() if line.startswith("#")]
     rows = np.loadtxt(text.splitlines())
-    assert "not to be fitted" in header[0]
+    assert "INVENTED" in header[0]
+    assert "not to be fitted" in header[1]
     assert rows.shape == (64, 3)
     assert np.all(rows[:, 2] >= 0.0)

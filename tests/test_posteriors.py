@@ -101,7 +101,7 @@ def test_quantiles_and_ranks_of_equal_weights_are_those_of_the_draws() -> None:
 
 @pytest.mark.parametrize("sigma_k", [0.3, 0.02, 0.002])
 def test_fast_and_sampled_posteriors_agree(sigma_k: float) -> None:
-    """From a prior hardly touched to turning points known to a percent: two samplers with nothing in common but a start."""
+    """From a prior hardly touched to turning points known to a percent."""
     model = trough_model(PRIOR, FREQUENCY, WIDTH)
     information = white(model, sigma_k, 6)
     fast = fast_posterior(
@@ -131,24 +131,36 @@ def test_narrow_prior_and_cold_gas_are_flagged_and_a_good_case_is_not() -> None:
     model = trough_model(PRIOR, FREQUENCY, WIDTH)
     good = white(model, 0.001, 9)
     posterior = sample_posterior(good, model, PRIOR, np.random.default_rng(1), lambda done: None)
-    assert summarise(posterior, model)["flags"] == []
+    assert summarise(posterior, model, good)["flags"] == []
     cold = TRUTH.copy()
     cold[4] = -280.0
     deep = information_of(np.eye(80) / 0.001, model.signal_k(cold) / 0.001)
-    summary = summarise(sample_posterior(deep, model, PRIOR, np.random.default_rng(1), lambda done: None), model)
+    summary = summarise(sample_posterior(deep, model, PRIOR, np.random.default_rng(1), lambda done: None), model, deep)
     # The floor at 71 MHz lies at some -199 mK.
     assert summary["points"]["C"]["share_colder_than_gas"] > 0.99
     assert any("C is colder" in flag for flag in summary["flags"])
     narrow = PRIOR.model_copy(update={"c": PointPrior(frequency_mhz=(55.0, 71.0), temperature_mk=(-300.0, -10.0))})
     edge = trough_model(narrow, FREQUENCY, WIDTH)
-    summary = summarise(sample_posterior(good, edge, narrow, np.random.default_rng(1), lambda done: None), edge)
+    summary = summarise(sample_posterior(good, edge, narrow, np.random.default_rng(1), lambda done: None), edge, good)
     assert any(flag.startswith("frequency_c_mhz runs into the upper bound") for flag in summary["flags"])
+
+
+def test_a_shape_that_no_trough_has_is_flagged() -> None:
+    """A narrow bump beside the trough, at sixty times the noise of a channel."""
+    model = trough_model(PRIOR, FREQUENCY, WIDTH)
+    bump = 0.06 * np.exp(-(((FREQUENCY - 60.0) / 1.5) ** 2))
+    information = information_of(np.eye(80) / 0.001, (model.signal_k(TRUTH) + bump) / 0.001)
+    posterior = sample_posterior(information, model, PRIOR, np.random.default_rng(1), lambda done: None)
+    assert any(
+        flag.startswith("no trough of this shape fits") for flag in summarise(posterior, model, information)["flags"]
+    )
 
 
 def test_summary_holds_medians_intervals_and_the_whole_covariance() -> None:
     model = trough_model(PRIOR, FREQUENCY, WIDTH)
-    posterior = sample_posterior(white(model, 0.005, 2), model, PRIOR, np.random.default_rng(1), lambda done: None)
-    summary = summarise(posterior, model)
+    information = white(model, 0.005, 2)
+    posterior = sample_posterior(information, model, PRIOR, np.random.default_rng(1), lambda done: None)
+    summary = summarise(posterior, model, information)
     matrix = np.array(summary["covariance"]["matrix"])
     assert summary["covariance"]["parameters"] == list(NAMES)
     assert matrix.shape == (6, 6)
@@ -165,7 +177,7 @@ def test_channel_means_of_the_trough_are_exact_for_its_cubics() -> None:
     model = trough_model(PRIOR, FREQUENCY, WIDTH)
     fine = trough_model(PRIOR, np.linspace(40.005, 119.995, 8000), np.full(8000, 0.01))
     expected = fine.signal_k(TRUTH).reshape(80, 100).mean(axis=1)
-    # Exact within a cubic piece; a turning point inside a channel breaks the second derivative there: 0.1 K / 20^2 / 24.
+    # Exact within a cubic piece; a turning point in a channel breaks the second derivative there: 0.1 K / 20^2 / 24.
     assert model.signal_k(TRUTH) == pytest.approx(expected, abs=1e-5)
 
 

@@ -90,7 +90,7 @@ def test_files_that_are_no_products_are_refused(tmp_path: Path) -> None:
     write_product(product(), tmp_path / "whole.nc")
     whole = (tmp_path / "whole.nc").read_bytes()
     (tmp_path / "cut.nc").write_bytes(whole[: len(whole) // 2])
-    with pytest.raises(InputError, match="cut.nc: not readable as NetCDF-4"):
+    with pytest.raises(InputError, match=r"cut\.nc: not readable as NetCDF-4"):
         read_netcdf(tmp_path / "cut.nc")
     other: Product = {"b": Variable(("channel",), "1/K", "b")}
     with pytest.raises(InputError, match=r"whole.nc: variable b\['channel'\] is missing"):

@@ -58,7 +58,8 @@ class Case:
     def measured(self) -> tuple[Products, FitConfig]:
         """The same as somebody's measurement: no truth, and a configuration of the fit alone."""
         products = Products({name: made for name, made in self.products.items() if name != "truth.nc"})
-        spectra = products.dataset("spectra.nc").copy()
+        spectra = products.dataset("spectra.nc").copy(deep=True)
+        spectra["signal_response"][:] = 1.0
         spectra.attrs = {"bin_labels": ["low", "dusk", "high"], "signal_response_given": 0, "source": "field.csv"}
         products["spectra.nc"] = spectra
         run = self.config.run.model_copy(update={"name": "Measured"})
@@ -146,7 +147,7 @@ def case() -> Case:
     information: Information = information_from(products.dataset("bundle.nc"))
     posterior = sample_posterior(information, model, config.turning_points, rng, lambda steps: None)
     products["posterior.nc"] = posterior.samples
-    products["turning_points.json"] = summarise(posterior, model)
+    products["turning_points.json"] = summarise(posterior, model, information)
     return Case(products, config, model, fit)
 
 
@@ -374,7 +375,11 @@ def test_summary_has_the_numbers_of_the_posterior(case: Case) -> None:
             assert line.endswith(f"{truth[point][at]:.2f}")
     numbers = case.products.dataset("bundle.nc").attrs
     chi, degrees = numbers["foreground_chi_squared"], numbers["foreground_degrees_of_freedom"]
-    assert f"{chi:.1f} /{degrees:6d} = {chi / degrees:.3f}; 1 ± {np.sqrt(2.0 / degrees):.3f} is expected" in page
+    assert (
+        f"{chi:.1f} /{degrees:6d} = {chi / degrees:.3f}; 1 ± {np.sqrt(2.0 / degrees):.3f} if nothing is missing" in page
+    )
+    best = found["best_trough"]["chi_squared"], found["best_trough"]["degrees_of_freedom"]
+    assert f"{best[0]:.1f} /{best[1]:6d} = {best[0] / best[1]:.3f}" in page
     assert f"{numbers['signal_surviving_fraction']:.2%}" in page
     assert f"{found['detection_statistic']:.2f}. What counts as a detection" in page
     assert f"{max(found['convergence']['split_r_hat'].values()):.4f}" in page

@@ -278,13 +278,16 @@ def test_conditions_that_are_never_met_are_refused_with_their_counts() -> None:
 
 
 def test_bad_observations_are_refused() -> None:
-    naive = observation().model_copy(update={"start": datetime(2027, 6, 1)})
-    unknown = observation().model_copy(update={"require": ("moon-hidden", "sun-hidden", "quiet")})
+    def unchecked(**changes: Any) -> Observation:
+        return observation().model_copy(update=changes)
+
+    naive = unchecked(start=datetime(2027, 6, 1))
+    unknown = unchecked(require=("moon-hidden", "sun-hidden", "quiet"))
     for wrong, said in (
         (naive, "no time zone"),
-        (observation(start=datetime(1969, 7, 20, tzinfo=UTC)), "reach outside"),
-        (observation(step_s=1e9, count=5), "reach outside"),
-        (observation(step_s=1e300, count=5), "reach outside"),
+        (unchecked(start=datetime(1969, 7, 20, tzinfo=UTC)), "reach outside"),
+        (unchecked(step_s=1e9, count=5), "reach outside"),
+        (unchecked(step_s=1e300, count=5), "reach outside"),
     ):
         with pytest.raises(InputError, match=said):
             survey_geometry(orbit(TWO_FIELDS), wrong)

@@ -6,6 +6,7 @@ import numpy as np
 import xarray as xr
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from matplotlib.ticker import FixedLocator, FuncFormatter, NullLocator
 from numpy.typing import NDArray
 
 from reduce.report.facts import bin_labels, bins_with_data, left_of_signal_k, systematic_sigma_k, true_signal_k
@@ -50,7 +51,7 @@ def residuals_figure(products: Products, config: FitConfig) -> Figure:
     labels = [names[number] for number in bins_with_data(products)]
     count = len(labels)
     shown = np.unique(np.linspace(0, count - 1, min(count, MOST_PANELS)).astype(int))
-    columns = 1 + (len(shown) > 1) + (len(shown) > 8) + (len(shown) > 15)
+    columns = 1 + (len(shown) > 3) + (len(shown) > 8) + (len(shown) > 15)
     rows = -(-len(shown) // columns)
     which = "" if len(shown) == count else f", {len(shown)} of {count} bins"
     figure = sheet(
@@ -68,10 +69,11 @@ def residuals_figure(products: Products, config: FitConfig) -> Figure:
         shade_unused([axes], frequency, width, packed["flag"].values[number] != 0)
     for axes in panels[len(shown) :]:
         axes.set_axis_off()
-    panels[0].set_ylim(*_limits_mk(packed, shown, systematic_k))
+    _residual_scale(panels[: len(shown)], packed, _most_mk(packed, shown, systematic_k))
     for column in range(columns):
         last = max(row for row in range(rows) if row * columns + column < len(shown))
-        frequency_axis(grid[last, column], frequency[0] - width[0] / 2.0, frequency[-1] + width[-1] / 2.0)
+        low, high = frequency[0] - width[0] / 2.0, frequency[-1] + width[-1] / 2.0
+        frequency_axis(grid[last, column], low, high, label=last == rows - 1)
         grid[last, column].tick_params(labelbottom=True)
     for row in range(rows):
         grid[row, 0].set_ylabel("residual, mK")
@@ -139,13 +141,32 @@ def group_means(
     return sum_f[some] / total[some], sum_v[some] / total[some], total[some] ** -0.5
 
 
-def _limits_mk(packed: xr.Dataset, shown: NDArray[np.int_], systematic_k: FloatArray | None) -> tuple[float, float]:
+def _residual_scale(panels: list[Axes], packed: xr.Dataset, most_mk: float) -> None:
+    """Linear within the typical noise and logarithmic beyond, or the lowest channels alone would set the scale."""
+    linear_mk = _typical_noise_mk(packed)
+    decades = [unit * 10.0**power for power in range(-3, 6) for unit in (1.0, 3.0)]
+    above = [value for value in decades if 0.8 * linear_mk <= value <= most_mk]
+    places = [*(-value for value in reversed(above)), 0.0, *above]
+    for axes in panels:
+        axes.set_yscale("asinh", linear_width=linear_mk)
+        axes.set_ylim(-most_mk, most_mk)
+        axes.yaxis.set_major_locator(FixedLocator(places))
+        axes.yaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}".replace("-", "−")))
+        axes.yaxis.set_minor_locator(NullLocator())
+
+
+def _typical_noise_mk(packed: xr.Dataset) -> float:
+    """Median noise of the channels in use."""
+    return 1e3 * float(np.median(np.sqrt(packed["noise_variance"].values[packed["flag"].values == 0])))
+
+
+def _most_mk(packed: xr.Dataset, shown: NDArray[np.int_], systematic_k: FloatArray | None) -> float:
+    """Reach of the scale, a little past all that is drawn."""
     good = packed["flag"].values[shown] == 0
     reach = [packed["residual_k"].values[shown][good], packed["signal_left_k"].values[shown][good]]
     if systematic_k is not None:
         reach.append(np.hypot(systematic_k[shown][good], np.sqrt(packed["noise_variance"].values[shown][good])))
-    most = 1.08e3 * max(float(np.abs(values).max()) for values in reach)
-    return -most, most
+    return 1.15e3 * max(float(np.abs(values).max()) for values in reach)
 
 
 def _caption(packed: xr.Dataset) -> str:
@@ -161,4 +182,4 @@ def _caption(packed: xr.Dataset) -> str:
         caption += (
             " Waves common to all bins can be errors of calibration; dotted is what the covariance allows for them."
         )
-    return caption
+    return f"{caption} The scale is linear up to about {_typical_noise_mk(packed):.2g} mK, logarithmic beyond."

@@ -67,11 +67,10 @@ def _observed(products: Products, config: FitConfig) -> list[str]:
     unused = int((flag[bins] != 0).all(axis=0).sum())
     by = f" by {config.bins.by}" if isinstance(config, Config) and config.bins.by != "all" else ""
     empty = spectra.sizes["bin"] - len(bins)
+    counted = f"{len(bins)} bin{'s' if len(bins) > 1 else ''}"
     more = f" ({empty} more without data)" if empty else ""
     low, high = frequency[0] - width[0] / 2.0, frequency[-1] + width[-1] / 2.0
-    lines = [
-        f"{len(bins)} bin{'s' if len(bins) > 1 else ''}{by}{more}, {len(frequency)} channels from {low:.6g} to {high:.6g} MHz, {unused} never used"
-    ]
+    lines = [f"{counted}{by}{more}, {len(frequency)} channels from {low:.6g} to {high:.6g} MHz, {unused} never used"]
     if isinstance(config, Config):
         lines.append(
             f"from {config.vantage.kind.replace('-', ' ')}, beginning {config.observation.start:%Y-%m-%d %H:%M} UTC; "
@@ -119,6 +118,7 @@ def _engine(reached: dict[str, Any]) -> str:
 
 def _fit(products: Products, config: FitConfig) -> list[str]:
     numbers = products.dataset("bundle.nc").attrs
+    best = products["turning_points.json"]["best_trough"]
     sizes = products.dataset("bundle.nc").sizes
     modes, terms = sizes.get("mode", 0), sizes["term"]
     names = attribute_list(products.dataset("spectra.nc"), "mode_names")
@@ -129,7 +129,8 @@ def _fit(products: Products, config: FitConfig) -> list[str]:
         f"{float(numbers['foreground_condition_number']):.3g}",
         f"covariance: noise and {modes} systematic modes{about}",
         _chi("foreground alone", numbers["foreground_chi_squared"], numbers["foreground_degrees_of_freedom"]),
-        _chi("foreground and any signal", numbers["chi_squared_min"], numbers["degrees_of_freedom"]),
+        _chi("foreground, best trough", best["chi_squared"], best["degrees_of_freedom"]),
+        _chi("foreground, any signal", numbers["chi_squared_min"], numbers["degrees_of_freedom"]),
         f"of the signal's signal-to-noise ratio {surviving:.2%} survives the subtraction",
     ]
 
@@ -137,8 +138,9 @@ def _fit(products: Products, config: FitConfig) -> list[str]:
 def _chi(name: str, chi_squared: Any, degrees: Any) -> str:
     chi, dof = float(chi_squared), int(degrees)
     if dof <= 0:
-        return f"chi-squared, {name:26s}{chi:.1f} with no degree of freedom left"
-    return f"chi-squared, {name:26s}{chi:9.1f} /{dof:6d} = {chi / dof:.3f}; 1 ± {np.sqrt(2.0 / dof):.3f} is expected"
+        return f"chi-squared, {name:26s}{chi:9.1f} with no degree of freedom left"
+    scatter = np.sqrt(2.0 / dof)
+    return f"chi-squared, {name:26s}{chi:9.1f} /{dof:6d} = {chi / dof:.3f}; 1 ± {scatter:.3f} if nothing is missing"
 
 
 def _points(products: Products, config: FitConfig) -> list[str]:

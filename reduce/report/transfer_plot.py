@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
 from reduce.report.facts import bins_with_data, posterior_draws, thinned
@@ -66,7 +67,7 @@ def measured_shapes(root: FloatArray, signals_k: FloatArray) -> MeasuredShapes:
     """
     # Draws far outnumber channels; the triangle of their QR has the same covariance and is small.
     triangle = np.linalg.qr((signals_k - signals_k.mean(axis=0)) / np.sqrt(len(signals_k) - 1.0), mode="r")
-    spread_k = triangle.T
+    spread_k = np.asarray(triangle).T
     _, signal_to_noise, across = np.linalg.svd(root @ spread_k, full_matrices=False)
     shape_k = (spread_k @ across.T).T
     peak = np.abs(shape_k).argmax(axis=1)
@@ -96,8 +97,8 @@ def transfer_figure(products: Products, config: FitConfig, model: TroughModel) -
     constrained = int(np.sum(shapes.signal_to_noise > 1.0))
     caption = (
         "a, b: the signal as it reaches each bin, and what no foreground of the family can imitate of it (mind the "
-        "scales). c: R has one singular value a direction, a unit vector over the channels; the last ones, beyond the "
-        "panel, are what the foreground imitates. Together the directions would show this signal, were its shape "
+        "scales). c: R has one singular value a direction, a unit vector over the channels; those that the foreground "
+        "imitates lie beyond the panel or are absent. Together the directions would show this signal, were its shape "
         f"known, at {together:.1f} standard deviations. d: the three independent ways in which troughs of the prior "
         "differ that the data measure best, drawn at one prior standard deviation; "
         f"{constrained} ways are measured better than the prior knows them."
@@ -152,6 +153,7 @@ def _directions(axes: Axes, root: FloatArray, signal_k: FloatArray) -> None:
     axes.set_xlabel("direction, best measured first")
     axes.set_ylabel("along the direction, mK")
     axes.set_xlim(0, len(singular) + 1)
+    axes.xaxis.set_major_locator(MaxNLocator(integer=True))
     axes.legend(loc="upper left")
 
 
