@@ -126,7 +126,7 @@ def _noise_and_cost(config: Config, geometry: xr.Dataset) -> str:
         "  signal response  " + "".join(f"{value:10.4f}    " for value in mean_response),
         "  noise, a bin     " + "".join(f"{value:10.1f} mK " for value in sigma_mk) + " a channel",
         "",
-        f"  engine time      about {seconds:.0f} s ({per_sample_s * 1e3:.1f} ms a sample)",
-        f"  memory           about {memory / 1e6:.0f} MB beside the libraries",
+        f"  engine time      about {np.ceil(seconds):.0f} s ({per_sample_s * 1e3:.1f} ms a sample)",
+        f"  memory           about {np.ceil(memory / 1e6):.0f} MB beside the libraries",
     ]
     return "\n".join(lines)
