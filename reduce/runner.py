@@ -22,6 +22,7 @@ from pathlib import Path
 from typing import Any, Protocol
 
 import xarray as xr
+from threadpoolctl import threadpool_limits
 
 from sims.config import FitConfig
 from sims.errors import InputError
@@ -178,7 +179,9 @@ def run_stages(
                 journal.note(f"{stage.title}: reused")
                 continue
             begun = time.monotonic()
-            made = stage.work(products, config, tools)
+            # The matrices are small: a second BLAS thread costs more in waiting than it brings.
+            with threadpool_limits(1, user_api="blas"):
+                made = stage.work(products, config, tools)
             if set(made) != set(stage.makes):
                 raise RuntimeError(f"stage {stage.name} made {sorted(made)}, not {sorted(stage.makes)}")
             for name, product in made.items():

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import time
 from dataclasses import dataclass
 
 import numpy as np
@@ -375,17 +374,11 @@ def test_bad_input_is_refused() -> None:
         signal_design(**{**common, "basis": doubled}, signal_response=case.response)  # type: ignore[arg-type]
 
 
-def test_a_full_campaign_takes_a_moment() -> None:
-    """Eight bins of 256 channels, 48 foreground terms, 10 modes, and a thousand mocks."""
+def test_chi_squared_of_a_full_campaign_is_its_degrees_of_freedom() -> None:
+    """Eight bins of 256 channels, 48 foreground terms, 10 modes."""
     case = scene(bins=8, channels=256, modes=10, terms=6, noise_share=1e-5, seed=20)
-    seconds = []
-    for _ in range(3):
-        begin = time.perf_counter()
-        fit = case.fit()
-        information = design_of(case, fit).information(fit.residual_k, None)
-        seconds.append(time.perf_counter() - begin)
-    # 0.2 s on two ordinary cores; the best of three against five times that, so that only a change of order fails.
-    assert min(seconds) < 1.0
-    assert information.chi_squared_min == pytest.approx(
-        information.degrees_of_freedom, abs=5 * np.sqrt(2 * information.degrees_of_freedom)
-    )
+    fit = case.fit()
+    information = design_of(case, fit).information(fit.residual_k, None)
+    freedom = information.degrees_of_freedom
+    # Five standard deviations of chi-squared.
+    assert information.chi_squared_min == pytest.approx(freedom, abs=5 * np.sqrt(2 * freedom))
