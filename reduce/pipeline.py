@@ -21,7 +21,7 @@ from reduce.report.summary import summary
 from reduce.runner import Made, Outcome, Products, Progress, Stage, Tools, run_stages
 from reduce.spectra import read_spectra
 from reduce.trough_model import TroughModel, trough_model
-from reduce.turning_points import sample_posterior, summarise
+from reduce.turning_points import ENSEMBLES, sample_posterior, summarise
 from sims.campaign import engine_passes, observe
 from sims.config import FORWARD_SECTIONS, Config, FitConfig
 from sims.config_load import load_config, load_fit_config
@@ -76,7 +76,7 @@ def find_turning_points(products: Products, config: FitConfig, tools: Tools) -> 
     """Bundle -> posterior of B, C and D."""
     packed = products.dataset("bundle.nc")
     model, information = _model(packed, config), information_from(packed)
-    with tools.progress("sampling turning points", 4 * config.turning_points.steps) as advance:
+    with tools.progress("sampling turning points", ENSEMBLES * config.turning_points.steps) as advance:
         posterior = sample_posterior(
             information, model, config.turning_points, stream(config.run.seed, "posterior"), advance
         )

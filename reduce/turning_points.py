@@ -1,6 +1,6 @@
 """Information form -> posterior of the turning points B, C and D, sampled for the record.
 
-An ensemble sampler (emcee; Foreman-Mackey et al. 2013) runs four independent ensembles,
+An ensemble sampler (emcee; Foreman-Mackey et al. 2013) runs two independent ensembles,
 started from the annealed one of `fast_posterior`. Results follow ArviZ's conventions.
 """
 
@@ -28,7 +28,7 @@ with warnings.catch_warnings():
 
 FloatArray = NDArray[np.float64]
 
-ENSEMBLES = 4
+ENSEMBLES = 2
 BURN_IN_SHARE = 0.25
 THINNING = 4
 PROGRESS_STEPS = 100

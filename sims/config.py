@@ -137,8 +137,8 @@ class TurningPoints(Section):
             problems.append("the ranges leave no room for a < b < c < d < e in frequency")
         if self.c.temperature_mk[0] >= min(self.b.temperature_mk[1], self.d.temperature_mk[1]):
             problems.append("the ranges leave no room for c below b and d in temperature")
-        if self.walkers % 8:
-            problems.append(f"walkers must be a multiple of 8 (four ensembles of an even number), got {self.walkers}")
+        if self.walkers % 4:
+            problems.append(f"walkers must be a multiple of 4 (two ensembles of an even number), got {self.walkers}")
         if problems:
             raise ValueError("; ".join(problems))
         return self

@@ -8,6 +8,7 @@ image is seen, and how bright that image is.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -82,6 +83,7 @@ def fresnel_reflectivity(cosine_incidence: NDArray[np.float64], permittivity: fl
     return np.asarray(0.5 * (across + along))
 
 
+@lru_cache(maxsize=4)
 def mirror(limb_angle_rad: float, permittivity: float, *, sphere: bool) -> Mirror:
     """Tabulate the mirror image of the sky in a smooth sphere, or in a plane.
 
@@ -108,6 +110,7 @@ def mirror(limb_angle_rad: float, permittivity: float, *, sphere: bool) -> Mirro
         return _sphere_columns(grazing_angle_rad(from_nadir, limb_angle_rad), limb_angle_rad, permittivity)
 
     table = cubic_table(columns, -1.0, cosine_limb, tolerance=MIRROR_TOLERANCE, intervals=128, cap=4096)
+    table.flags.writeable = False  # it is shared by all who ask for the same mirror
     return Mirror(table, cosine_limb)
 
 

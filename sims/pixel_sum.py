@@ -20,6 +20,7 @@ from sims.profile import cubic_table
 
 FloatArray = NDArray[np.float64]
 CHUNK_SAMPLES = 64
+FEWEST_INTERVALS = 1024
 
 
 @dataclass(frozen=True)
@@ -66,8 +67,13 @@ def beam_tables(beam: Beam, frequency_mhz: FloatArray) -> FloatArray:
     def tabulate(profile: Callable[[FloatArray, FloatArray], FloatArray], intervals: int) -> FloatArray:
         return cubic_table(lambda x: profile(frequency_mhz, x), -1.0, 1.0, tolerance=1e-12, intervals=intervals)
 
-    intervals = max(tabulate(profile, 256).shape[0] for profile in beam.profiles)
-    return np.stack([tabulate(profile, intervals) for profile in beam.profiles])
+    tables = [tabulate(profile, FEWEST_INTERVALS) for profile in beam.profiles]
+    most = max(table.shape[0] for table in tables)
+    same = [
+        table if table.shape[0] == most else tabulate(profile, most)
+        for table, profile in zip(tables, beam.profiles, strict=True)
+    ]
+    return np.stack(same)
 
 
 def pixel_sums(

@@ -114,7 +114,7 @@ CASES: dict[str, tuple[list[Change], list[str]]] = {
     "prior reversed": ([('["55 MHz", "95 MHz"]', '["95 MHz", "55 MHz"]')], ["turning_points.c: frequency must rise"]),
     "prior of one number": ([('["55 MHz", "95 MHz"]', '"70 MHz"')], ["turning_points.c.frequency", "should be a list"]),
     "no room in the prior": ([('["-300 mK", "-10 mK"]', '["61 mK", "70 mK"]')], ["turning_points: the ranges leave no room"]),
-    "odd walkers": ([("walkers = *", "walkers = 100")], ["turning_points: walkers must be a multiple of 8", "got 100"]),
+    "odd walkers": ([("walkers = *", "walkers = 102")], ["turning_points: walkers must be a multiple of 4", "got 102"]),
     "too few walkers": ([("walkers = *", "walkers = 8")], ["turning_points.walkers: should be greater than or equal to 64"]),
     "vertical wire in the ground": (
         [('length = "1.6 m"', 'length = "1.6 m"\nwire = "vertical"\nheight = "0.5 m"')], ["beam.height, 0.5 m"],

@@ -133,6 +133,11 @@ def key(strip: Axes, handles: Sequence[Any], columns: int) -> None:
 
 def png(figure: Figure) -> bytes:
     """The picture, without date or version in it: the same figure gives the same bytes."""
+    # Saving would lay out twice; once is enough.
+    layout = figure.get_layout_engine()
+    if layout is not None:
+        layout.execute(figure)
+        figure.set_layout_engine("none")
     buffer = io.BytesIO()
     figure.savefig(buffer, format="png", dpi=DPI, metadata={"Software": None})
     return buffer.getvalue()
