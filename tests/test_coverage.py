@@ -15,7 +15,7 @@ sys.path.insert(0, str(Path(__file__).parent / "studies"))
 from coverage_study import coverage_table, false_alarms, family_wise_p, run_mocks
 from mocks import make_bench
 
-MOCKS = 60
+MOCKS = 40
 
 
 @pytest.fixture(scope="module")

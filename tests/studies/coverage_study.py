@@ -15,6 +15,7 @@ import numpy as np
 from mocks import Bench, Result, make_bench, reduce_mock
 from numba import set_num_threads
 from scipy import stats
+from threadpoolctl import threadpool_limits
 
 from reduce.trough_model import NAMES
 
@@ -24,12 +25,16 @@ FALSE_ALARMS = 0.01
 NULL_OFFSET = 1_000_000  # signal-free mocks share no draw with the others
 
 
+def _one_thread() -> None:
+    """Each process keeps to one thread; more would wait for each other."""
+    set_num_threads(1)
+    threadpool_limits(1)
+
+
 def run_mocks(bench: Bench, count: int, processes: int, *, signal: bool) -> list[Result]:
     """Reduce `count` mocks; those without a signal are others than those with one."""
     numbers = [index if signal else NULL_OFFSET + index for index in range(count)]
-    with ProcessPoolExecutor(
-        processes, mp_context=get_context("spawn"), initializer=set_num_threads, initargs=(1,)
-    ) as pool:
+    with ProcessPoolExecutor(processes, mp_context=get_context("spawn"), initializer=_one_thread) as pool:
         return list(pool.map(partial(reduce_mock, bench, signal=signal), numbers, chunksize=5))
 
 
