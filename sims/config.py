@@ -1,7 +1,7 @@
 """The settings of a campaign and its reduction as frozen models, one class a table of the configuration.
 
 `sims.config_load` turns a TOML file into these; every later stage is handed the one table
-it needs. The forward tables stand in `sims.config_forward` and can be had from here.
+it needs. The forward tables stand in files of their own (`sims.config_sky`, ...) and can be had from here.
 """
 
 from __future__ import annotations
@@ -13,30 +13,26 @@ from typing import Any, Literal, Self
 import numpy as np
 from pydantic import Field, model_validator
 
+from sims.config_beam import Beam, Dipole, GaussianBeam, ShortDipole
 from sims.config_forward import (
-    Beam,
     Bins,
-    Boresight,
     Channels,
-    Dipole,
-    FixedBoresight,
     FlattenedGaussianSignal,
-    GaussianBeam,
-    GroundSite,
-    HealpixSky,
-    ImageSky,
-    InventedSky,
-    LunarOrbit,
     NoSignal,
-    Observation,
     Point,
     Receiver,
-    ShortDipole,
     Signal,
-    Sky,
-    Surface,
     TableSignal,
     TurningPointSignal,
+)
+from sims.config_sky import HealpixSky, ImageSky, InventedSky, Sky
+from sims.config_vantage import (
+    Boresight,
+    FixedBoresight,
+    GroundSite,
+    LunarOrbit,
+    Observation,
+    Surface,
     Vantage,
     VerticalBoresight,
 )
