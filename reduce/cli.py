@@ -108,6 +108,39 @@ def check(config: ConfigFile) -> None:
 
 
 @app.command()
+def timeline(config: ConfigFile, out: OutFolder, update: Update = False) -> None:
+    """Find when it is quiet: Earth hidden, Sun hidden, both.
+
+    Prints sums, months, orbits and windows, from the first to the last sample of
+    [observation], and writes timeline.csv (windows), timeline_orbits.csv or
+    timeline_days.csv, and timeline.png. Files already there are refused without --update.
+    """
+    from reduce.report.timeline_page import report_timeline  # noqa: PLC0415
+
+    with _complaints():
+        typer.echo(report_timeline(config, out, update=update))
+
+
+@app.command()
+def sky(
+    config: ConfigFile,
+    out: Annotated[
+        Path | None, typer.Option("--out", metavar="DIR", help="Folder for page and plots; none: print only.")
+    ] = None,
+    update: Update = False,
+) -> None:
+    """Judge the sky: maps, spectrum, smoothness.
+
+    Prints what was read and done to it, and with --out writes sky.txt, sky_maps.png, sky_index.png and
+    sky_spectrum.png. Files already there are refused without --update.
+    """
+    from reduce.report.sky_page import report_sky  # noqa: PLC0415
+
+    with _complaints():
+        typer.echo(report_sky(config, out, update=update))
+
+
+@app.command()
 def new(
     folder: Annotated[Path, typer.Argument(metavar="DIR", help="Folder to begin in.", show_default=False)],
 ) -> None:

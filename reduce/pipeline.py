@@ -13,6 +13,7 @@ import numpy as np
 import xarray as xr
 
 from reduce.binning import bin_recording, mean_by_bin
+from reduce.chromaticity import PASSES, corrected
 from reduce.handoff import bundle, combined_spectrum_text, information_from
 from reduce.joint_fit import joint_fit
 from reduce.knowledge_modes import engine_runs, knowledge_modes
@@ -48,6 +49,10 @@ def observe_campaign(products: Products, config: FitConfig, tools: Tools) -> Mad
             response_modes=(("mode", "bin", "channel"), modes.response),
         )
         spectra.attrs["mode_names"] = list(modes.names)
+    if config.correction is not None:
+        with tools.progress("chromaticity of the beam", PASSES * samples) as advance:
+            spectra = corrected(spectra, config, advance)
+        tools.note(f"chromaticity of the {config.correction.beam} beam divided out of the foreground")
     truth = observed.truth.assign_attrs(sky=config.sky.kind)
     binned = truth.drop_vars(["foreground_k", "signal_response"]).assign(
         {

@@ -13,17 +13,18 @@ from typing import Any
 
 import numpy as np
 import xarray as xr
+from numpy.typing import NDArray
 
 from reduce.binning import bin_of_each_sample, mean_by_bin
 from reduce.knowledge_modes import SAMPLES_PER_BIN, engine_runs
 from sims.campaign import engine_passes, scene_of
-from sims.config import Config
+from sims.config import ORBIT_KINDS, Config
 from sims.config_load import load_config
 from sims.frequency import channel_grid, chebyshev_nodes_mhz
 from sims.receiver import noise_variance_k2
 from sims.sky import sky_from
 from sims.sky_average import evaluate
-from sims.vantage import survey_geometry
+from sims.vantage import full_geometry, survey_geometry
 
 TIMED_SAMPLES = 16
 BYTES_PER_NUMBER = 8
@@ -58,6 +59,9 @@ def _resolved(config: Config) -> str:
     lines = ["Resolved configuration"]
     for name, section in config.model_dump(mode="json").items():
         lines.append(f"[{name}]")
+        if section is None:
+            lines.append("  not used")
+            continue
         lines += [f"  {key} = {json.dumps(value)}" for key, value in _leaves(section)]
     return "\n".join(lines)
 
@@ -77,21 +81,33 @@ def _leaves(table: dict[str, Any], before: str = "") -> list[tuple[str, Any]]:
 
 
 def _geometry(config: Config, geometry: xr.Dataset) -> str:
-    everything = survey_geometry(config.vantage, config.observation.model_copy(update={"require": ()}))
+    everything = full_geometry(config.vantage, config.observation)
     kept, total = geometry.sizes["time"], everything.sizes["time"]
     first, last = (str(geometry["time"].values[at])[:19] for at in (0, -1))
     label = bin_of_each_sample(geometry, config.bins)
     counts = np.bincount(label, minlength=config.bins.count)
-    limb = np.degrees(geometry["limb_angle_rad"].values[0])
     lines = ["Geometry", f"  samples kept          {kept} of {total}, {first} to {last} UTC"]
-    if config.vantage.kind == "lunar-orbit":
-        lines += [
-            f"  Earth hidden          {float(everything['earth_hidden'].mean()):.1%} of all samples",
-            f"  Sun hidden            {float(everything['sun_hidden'].mean()):.1%} of all samples",
-            f"  Moon's angular radius {limb:.3f} deg, {(1 - np.cos(np.radians(limb))) / 2:.1%} of the sphere",
-        ]
+    span_hours = kept * config.observation.step_s / 3600.0
+    asked_hours = config.observation.integration_hours
+    lines.append(
+        f"  time in them          {span_hours:.1f} h; {asked_hours:g} h of integration are spread over them, as if "
+        f"{asked_hours / span_hours:.1f} such spans were observed"
+    )
+    if config.vantage.kind != "ground":
+        lines.append(f"  Earth hidden          {float(everything['earth_hidden'].mean()):.1%} of all samples")
+    lines.append(f"  Sun hidden            {float(everything['sun_hidden'].mean()):.1%} of all samples")
+    if config.vantage.kind in ORBIT_KINDS:
+        limb = np.degrees(geometry["limb_angle_rad"].values)
+        shares = (1 - np.cos(np.radians(limb))) / 2
+        lines.append(f"  Moon's angular radius {_range(limb, '.3f')} deg, {_range(shares, '.1%')} of the sphere")
     lines.append(f"  samples in each bin   {counts.tolist()}")
     return "\n".join(lines)
+
+
+def _range(values: NDArray[np.float64], form: str) -> str:
+    """One number where both ends print the same, else the two."""
+    lowest, highest = format(values.min(), form), format(values.max(), form)
+    return lowest if lowest == highest else f"{lowest} to {highest}"
 
 
 def _noise_and_cost(config: Config, geometry: xr.Dataset) -> str:

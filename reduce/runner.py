@@ -223,11 +223,20 @@ def stage_keys(stages: tuple[Stage, ...], config: FitConfig, given: Mapping[str,
 def _section(config: FitConfig, name: str) -> Any:
     """A table of the configuration, its files replaced by their checksums."""
     section = getattr(config, name)
-    settings = section.model_dump(mode="json")
-    for key in settings:
-        if isinstance(getattr(section, key), Path):
-            settings[key] = sha256_of(getattr(section, key))
-    return settings
+    return None if section is None else _checksums(section.model_dump())
+
+
+def _checksums(value: Any) -> Any:
+    """Settings as JSON takes them, files at any depth as their checksums, dates as text."""
+    if isinstance(value, Path):
+        return sha256_of(value)
+    if isinstance(value, datetime):
+        return value.isoformat()
+    if isinstance(value, dict):
+        return {key: _checksums(item) for key, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [_checksums(item) for item in value]
+    return value
 
 
 def _claim(

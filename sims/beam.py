@@ -14,14 +14,49 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.spatial.transform import Rotation
 
-from sims import config
+from sims.config_beam import Dipole, FileBeam, GaussianBeam, ShortDipole
 from sims.constants import SPEED_OF_LIGHT_M_PER_S
+from sims.profile import cubic_table
 
 Profile = Callable[[NDArray[np.float64], NDArray[np.float64]], NDArray[np.float64]]
 """Takes frequency_mhz[frequency] and cosine[point]; returns relative power[point, frequency]."""
 
 X_AXIS = (1.0, 0.0, 0.0)
 Z_AXIS = (0.0, 0.0, 1.0)
+FEWEST_INTERVALS = 1024
+
+
+ClosedForm = ShortDipole | Dipole | GaussianBeam
+
+
+@dataclass(frozen=True)
+class Ripple:
+    """A standing wave on the structure: power times 1 + fraction cos(2 pi f / period + phase) cos(theta).
+
+    Attributes
+    ----------
+    fraction : float
+    period_mhz : float
+        MHz.
+    phase_rad : float
+        Rad.
+    """
+
+    fraction: float
+    period_mhz: float
+    phase_rad: float
+
+    @classmethod
+    def of(cls, settings: ClosedForm | FileBeam) -> Ripple | None:
+        """The ripple of a ``[beam]`` table; None where its fraction is zero."""
+        if settings.ripple_fraction == 0.0:
+            return None
+        return cls(settings.ripple_fraction, settings.ripple_period_mhz, float(np.radians(settings.ripple_phase_deg)))
+
+    def factor(self, frequency_mhz: NDArray[np.float64], cosine: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Factor on the power, ndarray[point, frequency], by the cosine of theta, ndarray[point]."""
+        wave = self.fraction * np.cos(2.0 * np.pi * frequency_mhz / self.period_mhz + self.phase_rad)
+        return np.asarray(1.0 + cosine[:, None] * wave)
 
 
 @dataclass(frozen=True)
@@ -83,6 +118,14 @@ class Beam:
         """
         return np.asarray(self.relative_power(frequency_mhz, direction) / self._mean_power(frequency_mhz))
 
+    def efficiency_at(self, frequency_mhz: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Radiation efficiency, ndarray[frequency]: the same at all frequencies."""
+        return np.full(len(frequency_mhz), self.efficiency)
+
+    def ground_share_at(self, frequency_mhz: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Share of the power lost in the ground, ndarray[frequency]: none, in closed form."""
+        return np.zeros(len(frequency_mhz))
+
     def _mean_power(self, frequency_mhz: NDArray[np.float64]) -> NDArray[np.float64]:
         """Mean over the sphere; the two hemispheres apart, since a plane breaks the pattern between them."""
         x, weight = np.polynomial.legendre.leggauss(96)
@@ -98,7 +141,7 @@ class Beam:
         return np.asarray(z_weight @ power)
 
 
-def beam_from(settings: config.ShortDipole | config.Dipole | config.GaussianBeam) -> Beam:
+def beam_from(settings: ClosedForm) -> Beam:
     """Beam as configured.
 
     Parameters
@@ -110,7 +153,7 @@ def beam_from(settings: config.ShortDipole | config.Dipole | config.GaussianBeam
     -------
     Beam
     """
-    axes, profiles = _factors(settings)
+    axes, profiles = _rippled(*_factors(settings), Ripple.of(settings))
     return Beam(
         axes=np.array(axes),
         profiles=profiles,
@@ -182,14 +225,60 @@ def _short_profile(frequency_mhz: NDArray[np.float64], cosine: NDArray[np.float6
     return np.repeat(1.0 - cosine[:, None] ** 2, len(frequency_mhz), axis=1)
 
 
-def _factors(
-    settings: config.ShortDipole | config.Dipole | config.GaussianBeam,
-) -> tuple[list[tuple[float, float, float]], tuple[Profile, ...]]:
-    if isinstance(settings, config.ShortDipole):
+def _factors(settings: ClosedForm) -> tuple[list[tuple[float, float, float]], tuple[Profile, ...]]:
+    """Axes and profiles; an antenna larger by the scale has the pattern of a wave shorter by it."""
+    scale = settings.dimension_scale
+    if isinstance(settings, ShortDipole):
         return [X_AXIS], (_short_profile,)
-    if isinstance(settings, config.GaussianBeam):
-        return [Z_AXIS], (gaussian_profile(settings.width_deg, settings.frequency_mhz, settings.width_exponent),)
+    if isinstance(settings, GaussianBeam):
+        width = gaussian_profile(settings.width_deg, settings.frequency_mhz / scale, settings.width_exponent)
+        return [Z_AXIS], (width,)
     wire_axis = X_AXIS if settings.wire == "horizontal" else Z_AXIS
+    wire = wire_profile(scale * settings.length_m)
     if settings.height_m is None:
-        return [wire_axis], (wire_profile(settings.length_m),)
-    return [wire_axis, Z_AXIS], (wire_profile(settings.length_m), plane_profile(settings.height_m, settings.wire))
+        return [wire_axis], (wire,)
+    return [wire_axis, Z_AXIS], (wire, plane_profile(scale * settings.height_m, settings.wire))
+
+
+def _rippled(
+    axes: list[tuple[float, float, float]], profiles: tuple[Profile, ...], ripple: Ripple | None
+) -> tuple[list[tuple[float, float, float]], tuple[Profile, ...]]:
+    """The ripple taken into the profile about z, or as one of its own."""
+    if ripple is None:
+        return axes, profiles
+    if Z_AXIS not in axes:
+        return [*axes, Z_AXIS], (*profiles, ripple.factor)
+    place = axes.index(Z_AXIS)
+    smooth = profiles[place]
+
+    def both(frequency_mhz: NDArray[np.float64], cosine: NDArray[np.float64]) -> NDArray[np.float64]:
+        return np.asarray(smooth(frequency_mhz, cosine) * ripple.factor(frequency_mhz, cosine))
+
+    return axes, (*profiles[:place], both, *profiles[place + 1 :])
+
+
+def beam_tables(beam: Beam, frequency_mhz: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Profiles of a beam tabulated for the engine's kernel.
+
+    Parameters
+    ----------
+    beam : Beam
+    frequency_mhz : ndarray[frequency]
+        Frequency, MHz.
+
+    Returns
+    -------
+    ndarray[factor, interval, 4, frequency]
+        Cubics in the cosine, all factors on the same intervals.
+    """
+
+    def tabulate(profile: Profile, intervals: int) -> NDArray[np.float64]:
+        return cubic_table(lambda x: profile(frequency_mhz, x), -1.0, 1.0, tolerance=1e-12, intervals=intervals)
+
+    tables = [tabulate(profile, FEWEST_INTERVALS) for profile in beam.profiles]
+    most = max(table.shape[0] for table in tables)
+    same = [
+        table if table.shape[0] == most else tabulate(profile, most)
+        for table, profile in zip(tables, beam.profiles, strict=True)
+    ]
+    return np.stack(same)

@@ -17,14 +17,15 @@ from numpy.typing import NDArray
 from scipy.spatial.transform import Rotation
 
 from sims import config as settings
-from sims.beam import beam_from
+from sims.beam_files import antenna_from
 from sims.draws import Draw, draw
 from sims.frequency import ChannelGrid, channel_grid
+from sims.horizon import read_horizon
 from sims.pixel_sum import Pointing
 from sims.receiver import gain, noise_variance_k2, received_k
 from sims.schema import RECORDING, describe
-from sims.sky import DiffuseSky, gaussian_field, moved_sky, sky_from
-from sims.sky_average import Reached, Scene, SkyAverage, scene_axes, sky_average
+from sims.sky import AnySky, index_error, moved_sky, sky_from
+from sims.sky_average import Reached, Scene, Sky, SkyAverage, scene_axes, sky_average
 from sims.streams import stream
 from sims.trough import channel_mean_k, flattened_gaussian_k, turning_point_trough_k
 from sims.trough_table import read_trough_table, tabulated_trough_k
@@ -63,11 +64,10 @@ class BlankSky:
     """A sky without brightness, for when only the response to a signal is wanted."""
 
     nside: int
-    directions: FloatArray
 
     def brightness_k(self, frequency_mhz: FloatArray) -> FloatArray:
         """Zero K everywhere."""
-        return np.zeros((len(self.directions), len(frequency_mhz)))
+        return np.zeros((12 * self.nside**2, len(frequency_mhz)))
 
 
 def observe(config: settings.Config, advance: Advance) -> Observed:
@@ -115,16 +115,14 @@ def engine_passes(config: settings.Config) -> int:
     return 1 if same else 2
 
 
-def true_sky(config: settings.Config, truth: Draw, nominal: DiffuseSky) -> DiffuseSky:
+def true_sky(config: settings.Config, truth: Draw, nominal: AnySky) -> AnySky:
     """The mock's true sky: drawn scalars, and drawn fields where ``[knowledge]`` has them."""
     sky = moved_sky(nominal, config.sky, truth.config.sky)
     if config.run.truth != "drawn":
         return sky
     seed, known = config.run.seed, config.knowledge
     if known.index_field is not None:
-        rng = stream(seed, "truth/index-field")
-        field = gaussian_field(sky.nside, known.index_field.sd, known.index_field.correlation_length_deg, rng)
-        sky = sky.with_index_field(field + known.index_field.mean_sd * rng.standard_normal())
+        sky = sky.with_index_field(index_error(known.index_field, sky.nside, stream(seed, "truth/index-field")))
     if known.map_noise is not None:
         rng = stream(seed, "truth/map-noise")
         sky = sky.with_map_noise(known.map_noise.sd_k * rng.standard_normal(len(sky.directions)))
@@ -132,7 +130,7 @@ def true_sky(config: settings.Config, truth: Draw, nominal: DiffuseSky) -> Diffu
 
 
 def simulate(
-    config: settings.Config, sky: DiffuseSky | BlankSky, geometry: xr.Dataset, grid: ChannelGrid, advance: Advance
+    config: settings.Config, sky: Sky, geometry: xr.Dataset, grid: ChannelGrid, advance: Advance
 ) -> SkyAverage:
     """Engine run for a configuration, sky and geometry."""
     scene = scene_of(config, sky, geometry)
@@ -147,16 +145,22 @@ def geometry_like(config: settings.Config, geometry: xr.Dataset, nominal: settin
     return survey_geometry(config.vantage, everything).sel(time=geometry["time"])
 
 
-def scene_of(config: settings.Config, sky: DiffuseSky | BlankSky, geometry: xr.Dataset) -> Scene:
+def scene_of(config: settings.Config, sky: Sky, geometry: xr.Dataset) -> Scene:
     """The engine's scene for a configuration, sky and geometry."""
-    beam = beam_from(config.beam)
+    beam = antenna_from(config.beam)
     attitude = Rotation.from_quat(geometry["attitude"].values).as_matrix()
     pointing = Pointing(
         axes=scene_axes(beam, attitude),
         nadir=np.ascontiguousarray(geometry["nadir"].values),
         limb_angle_rad=geometry["limb_angle_rad"].values,
+        north=np.ascontiguousarray(geometry["forward"].values),
+        pole=np.ascontiguousarray(geometry["pole"].values),
     )
-    return Scene(sky, beam, pointing, config.surface, sphere=config.vantage.kind == "lunar-orbit")
+    vantage = config.vantage
+    horizon_file = vantage.horizon_file if isinstance(vantage, settings.LunarSurface | settings.GroundSite) else None
+    horizon = None if horizon_file is None else read_horizon(horizon_file)
+    orbiting = isinstance(vantage, settings.LunarOrbit | settings.LunarOrbitFile)
+    return Scene(sky, beam, pointing, config.surface, sphere=orbiting, horizon=horizon)
 
 
 def signal_to_inject_k(signal: settings.Signal, grid: ChannelGrid) -> FloatArray:
@@ -188,8 +192,8 @@ def _for_response(config: settings.Config) -> settings.Config:
     return config.model_copy(update={"engine": config.engine.model_copy(update={"nodes": fewer})})
 
 
-def _blank(sky: DiffuseSky) -> BlankSky:
-    return BlankSky(sky.nside, sky.directions)
+def _blank(sky: AnySky) -> BlankSky:
+    return BlankSky(sky.nside)
 
 
 def _recording(

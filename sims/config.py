@@ -13,7 +13,7 @@ from typing import Any, Literal, Self
 import numpy as np
 from pydantic import Field, model_validator
 
-from sims.config_beam import Beam, Dipole, GaussianBeam, ShortDipole
+from sims.config_beam import Beam, Dipole, FileBeam, GaussianBeam, ShortDipole
 from sims.config_forward import (
     Bins,
     Channels,
@@ -30,14 +30,18 @@ from sims.config_vantage import (
     Boresight,
     FixedBoresight,
     GroundSite,
+    Layer,
     LunarOrbit,
+    LunarOrbitFile,
+    LunarSurface,
     Observation,
+    ScheduledBoresight,
     Surface,
     Vantage,
     VerticalBoresight,
 )
 from sims.knowledge import Knowledge
-from sims.quantities import Kelvin, MhzRange, MillikelvinRange, Section
+from sims.quantities import Kelvin, Mhz, MhzRange, MillikelvinRange, Section
 
 __all__ = [
     "FORWARD_SECTIONS",
@@ -46,8 +50,10 @@ __all__ = [
     "Boresight",
     "Channels",
     "Config",
+    "Correction",
     "Dipole",
     "Engine",
+    "FileBeam",
     "FitConfig",
     "FixedBoresight",
     "FlattenedGaussianSignal",
@@ -57,13 +63,17 @@ __all__ = [
     "HealpixSky",
     "ImageSky",
     "InventedSky",
+    "Layer",
     "LunarOrbit",
+    "LunarOrbitFile",
+    "LunarSurface",
     "NoSignal",
     "Observation",
     "Point",
     "PointPrior",
     "Receiver",
     "Run",
+    "ScheduledBoresight",
     "ShortDipole",
     "Signal",
     "Sky",
@@ -75,6 +85,9 @@ __all__ = [
     "VerticalBoresight",
     "cross_problems",
 ]
+
+
+ORBIT_KINDS = ("lunar-orbit", "lunar-orbit-file")
 
 
 class Run(Section):
@@ -140,6 +153,13 @@ class TurningPoints(Section):
         return self
 
 
+class Correction(Section):
+    """``[correction]``: divide the beam's chromaticity out of the foreground, against one frequency."""
+
+    reference_mhz: Mhz = Field(gt=0)
+    beam: Literal["nominal", "true"] = "nominal"
+
+
 class Engine(Section):
     """``[engine]``: how the sky average is expanded in frequency and checked."""
 
@@ -177,6 +197,7 @@ class Config(FitConfig):
     signal: Signal
     bins: Bins
     engine: Engine = Engine()
+    correction: Correction | None = None
     knowledge: Knowledge = Knowledge()
 
     @model_validator(mode="after")
@@ -211,27 +232,39 @@ def cross_problems(sections: Mapping[str, Any]) -> list[str]:
     return problems
 
 
-def _bins_and_vantage(bins: Bins, vantage: LunarOrbit | GroundSite) -> list[str]:
-    needs = {
-        "pointing": ("vantage.boresight.kind", vantage.boresight.kind, "fixed"),
-        "orbit-phase": ("vantage.kind", vantage.kind, "lunar-orbit"),
-        "sidereal-time": ("vantage.kind", vantage.kind, "ground"),
+def _bins_and_vantage(bins: Bins, vantage: Vantage) -> list[str]:
+    needs: dict[str, tuple[str, str, tuple[str, ...]]] = {
+        "pointing": ("vantage.boresight.kind", vantage.boresight.kind, ("fixed", "schedule")),
+        "orbit-phase": ("vantage.kind", vantage.kind, ORBIT_KINDS),
+        "sidereal-time": ("vantage.kind", vantage.kind, ("ground",)),
     }
     problems = []
-    where, got, wanted = needs.get(bins.by, ("", "", ""))
-    if got != wanted:
-        problems.append(f'bins.by = "{bins.by}" needs {where} = "{wanted}", got "{got}"')
+    where, got, wanted = needs.get(bins.by, ("", "", ("",)))
+    if got not in wanted:
+        allowed = " or ".join(f'"{kind}"' for kind in wanted)
+        problems.append(f'bins.by = "{bins.by}" needs {where} = {allowed}, got "{got}"')
     count = {"all": 1}.get(bins.by, bins.count)
-    if bins.by == "pointing" and vantage.boresight.kind == "fixed":
+    if bins.by == "pointing" and isinstance(vantage.boresight, FixedBoresight):
         count = len(vantage.boresight.directions_deg)
+    if bins.by == "pointing" and isinstance(vantage.boresight, ScheduledBoresight):
+        count = len(vantage.boresight.targets)
     if bins.count != count:
         problems.append(f'bins.count must be {count} here, with bins.by = "{bins.by}" (got {bins.count})')
     return problems
 
 
-def _observation_and_vantage(observation: Observation, vantage: LunarOrbit | GroundSite) -> list[str]:
+def _observation_and_vantage(observation: Observation, vantage: Vantage) -> list[str]:
+    problems = []
     if "earth-hidden" in observation.require and vantage.kind == "ground":
-        return ['observation.require: "earth-hidden" cannot be met by vantage.kind = "ground"']
+        problems.append('observation.require: "earth-hidden" cannot be met by vantage.kind = "ground"')
+    if vantage.boresight.kind == "velocity" and vantage.kind not in ORBIT_KINDS:
+        problems.append(f'vantage.boresight.kind = "velocity" needs an orbit, got vantage.kind = "{vantage.kind}"')
+    return problems
+
+
+def _surface_and_vantage(surface: Surface, vantage: Vantage) -> list[str]:
+    if surface.polar_temperature_k is not None and vantage.kind == "ground":
+        return ['surface.polar_temperature is the Moon\'s: it cannot be used with vantage.kind = "ground"']
     return []
 
 
@@ -280,6 +313,21 @@ def _channels_and_foreground(channels: Channels, foreground: Foreground) -> list
     ]
 
 
+def _channels_and_correction(channels: Channels, correction: Correction) -> list[str]:
+    if channels.start_mhz <= correction.reference_mhz <= channels.stop_mhz:
+        return []
+    return [
+        f"correction.reference, {correction.reference_mhz} MHz, must lie within channels.start to channels.stop, "
+        f"{channels.start_mhz} to {channels.stop_mhz} MHz"
+    ]
+
+
+def _run_and_correction(run: Run, correction: Correction) -> list[str]:
+    if correction.beam == "true" and run.truth != "drawn":
+        return ['correction.beam = "true" needs run.truth = "drawn": with a nominal truth both beams are the same']
+    return []
+
+
 def _plane_below_wire(beam: Any) -> list[str]:
     vertical = beam.kind == "dipole" and beam.wire == "vertical" and beam.height_m is not None
     if vertical and beam.height_m < beam.length_m / 2:
@@ -292,9 +340,12 @@ def _plane_below_wire(beam: Any) -> list[str]:
 _JUDGES: tuple[tuple[tuple[str, ...], Callable[..., list[str]]], ...] = (
     (("bins", "vantage"), _bins_and_vantage),
     (("observation", "vantage"), _observation_and_vantage),
+    (("surface", "vantage"), _surface_and_vantage),
     (("channels", "sky"), _channels_and_sky),
     (("channels", "turning_points"), _channels_and_turning_points),
     (("channels", "signal"), _channels_and_signal),
     (("channels", "foreground"), _channels_and_foreground),
+    (("channels", "correction"), _channels_and_correction),
+    (("run", "correction"), _run_and_correction),
     (("beam",), _plane_below_wire),
 )

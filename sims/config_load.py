@@ -281,18 +281,20 @@ def _with_full_paths(fields: dict[str, Any], top: Place) -> dict[str, Any]:
     ]}  # fmt: skip
 
 
-def _with_files(section: Any, name: str, folder: Path, problems: list[str]) -> Any:
-    """The section with its files found, relative ones beside the configuration."""
-    if not isinstance(section, Section):
-        return section
-    found: dict[str, Path] = {}
-    for field in type(section).model_fields:
-        value = getattr(section, field)
-        if isinstance(value, Path):
-            found[field] = _located(value, folder)
-            if not found[field].is_file():
-                problems.append(f"{name}.{field}: no such file (got {str(value)!r}, looked for {found[field]})")
-    return section.model_copy(update=found) if found else section
+def _with_files(value: Any, where: str, folder: Path, problems: list[str]) -> Any:
+    """A value with the files it names found, in nested tables and lists too; relative ones beside the configuration."""
+    if isinstance(value, Path):
+        found = _located(value, folder)
+        if not found.is_file():
+            problems.append(f"{where}: no such file (got {str(value)!r}, looked for {found})")
+        return found
+    if isinstance(value, tuple):
+        return tuple(_with_files(item, f"{where}.{number}", folder, problems) for number, item in enumerate(value))
+    if isinstance(value, Section):
+        fields = type(value).model_fields
+        found_in = {name: _with_files(getattr(value, name), f"{where}.{name}", folder, problems) for name in fields}
+        return value.model_copy(update=found_in)
+    return value
 
 
 def _located(path: Path, folder: Path) -> Path:

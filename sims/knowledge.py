@@ -66,11 +66,26 @@ class Known(Section):
 
 
 class IndexField(Section):
-    """Error of the spectral index over the sky: a Gaussian field, and its mean's own error."""
+    """Error of the spectral index over the sky: a Gaussian field, and its mean's own error.
+
+    The field has the correlation exp(-theta^2 / (2 L^2)) with L = `correlation_length`, or the
+    angular power spectrum C_l ~ (l + l0)^-`angular_index` with l0 = `angular_offset`, of which
+    l = 0 is left to `mean_sd`. `sd` is that of each pixel either way.
+    """
 
     sd: float = Field(ge=0, le=1)
-    correlation_length_deg: Degree = Field(gt=0, le=180)
+    correlation_length_deg: Degree | None = Field(default=None, gt=0, le=180)
+    angular_index: float | None = Field(default=None, ge=0, le=10)
+    angular_offset: float | None = Field(default=None, ge=0, le=100)
     mean_sd: float = Field(default=0.0, ge=0, le=1)
+
+    @model_validator(mode="after")
+    def _one_spectrum(self) -> Self:
+        if (self.correlation_length_deg is None) == (self.angular_index is None):
+            raise ValueError("give one of correlation_length and angular_index")
+        if (self.angular_index is None) != (self.angular_offset is None):
+            raise ValueError("angular_index and angular_offset go together")
+        return self
 
 
 class MapNoise(Section):

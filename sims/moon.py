@@ -1,67 +1,24 @@
-"""What lies below the antenna: the Moon's disk, or the ground, as it hides, mirrors and emits.
+"""The surface of the body below: how much of the sky it reflects, and how bright it is.
 
-The engine asks three things of a direction of the sky, all functions of its angle from the
-nadir alone: how much of its pixel stands clear of the limb, where in the disk its mirror
-image is seen, and how bright that image is.
+The engine takes the mirror image of the sky from `sims.mirror`, weighs it with the
+reflectivity of this file, and lets the surface emit, at the temperature given here, what
+it does not reflect: an isotropic sky at the surface's own temperature comes back unchanged.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from functools import lru_cache
-
 import numpy as np
 from numpy.typing import NDArray
 
+from sims.config_vantage import Layer, Surface
+from sims.constants import SPEED_OF_LIGHT_M_PER_S, rayleigh_jeans_k
 from sims.profile import cubic_table
 
-MIRROR_TOLERANCE = 1e-10
-NEWTON_STEPS = 40
+FloatArray = NDArray[np.float64]
+REFLECTIVITY_TOLERANCE = 1e-9
 
 
-@dataclass(frozen=True)
-class Mirror:
-    """The specular image of the sky in the body below, tabulated.
-
-    Attributes
-    ----------
-    table : ndarray[interval, 4, 3]
-        Cubics in the cosine from the nadir, from -1 to `cosine_limb`; columns are a, b and
-        the weight: the image of direction n appears at m = a n + b nadir, and its solid
-        angle there times the reflectivity, over its own solid angle, is the weight.
-    cosine_limb : float
-        Cosine of the angle from nadir to limb.
-    """
-
-    table: NDArray[np.float64]
-    cosine_limb: float
-
-
-def visible_fraction(
-    cosine_from_nadir: NDArray[np.float64], limb_angle_rad: float, pixel_angle_rad: float
-) -> NDArray[np.float64]:
-    """How much of a pixel stands clear of the limb.
-
-    Parameters
-    ----------
-    cosine_from_nadir : ndarray[...]
-        Cosine of the angle between pixel centre and nadir.
-    limb_angle_rad : float
-        Angle from nadir to limb, rad.
-    pixel_angle_rad : float
-        Side of a pixel, rad: the limb is a ramp of this width, so a sum over pixels
-        changes smoothly as the limb crosses them; its error falls as the pixel's side to 1.7.
-
-    Returns
-    -------
-    ndarray[...]
-        0 behind the limb, 1 clear of it.
-    """
-    ramp = (np.cos(limb_angle_rad) - cosine_from_nadir) / (pixel_angle_rad * np.sin(limb_angle_rad))
-    return np.asarray(np.clip(0.5 + ramp, 0.0, 1.0))
-
-
-def fresnel_reflectivity(cosine_incidence: NDArray[np.float64], permittivity: float) -> NDArray[np.float64]:
+def fresnel_reflectivity(cosine_incidence: FloatArray, permittivity: float) -> FloatArray:
     """Power reflectivity of a smooth lossless dielectric for unpolarised waves (Fresnel).
 
     Parameters
@@ -76,82 +33,116 @@ def fresnel_reflectivity(cosine_incidence: NDArray[np.float64], permittivity: fl
     ndarray[...]
         Mean of the two polarisations. The antenna's own polarisation is left out.
     """
-    c = np.asarray(cosine_incidence, dtype=float)
-    root = np.sqrt(permittivity - 1.0 + c**2)
-    across = ((c - root) / np.where(c + root > 0.0, c + root, 1.0)) ** 2
-    along = ((permittivity * c - root) / np.where(permittivity * c + root > 0.0, permittivity * c + root, 1.0)) ** 2
-    return np.asarray(0.5 * (across + along))
+    across, along = _amplitudes(np.asarray(cosine_incidence, dtype=float), 1.0, permittivity)
+    return np.asarray(0.5 * (np.abs(across) ** 2 + np.abs(along) ** 2))
 
 
-@lru_cache(maxsize=4)
-def mirror(limb_angle_rad: float, permittivity: float, *, sphere: bool) -> Mirror:
-    """Tabulate the mirror image of the sky in a smooth sphere, or in a plane.
+def layered_reflectivity(
+    cosine_incidence: FloatArray, permittivity: float, layer: Layer, frequency_mhz: FloatArray
+) -> FloatArray:
+    """Power reflectivity of a layer over a half-space of another permittivity, unpolarised.
 
     Parameters
     ----------
-    limb_angle_rad : float
-        Angle from nadir to limb, rad. For a sphere its sine is body radius over distance.
+    cosine_incidence : ndarray[point]
+        Cosine of the angle of incidence.
     permittivity : float
-        Relative permittivity of the surface.
-    sphere : bool
-        True for the Moon from orbit, False for level ground.
+        Relative permittivity of the top layer.
+    layer : Layer
+        Its thickness and loss tangent, and the permittivity of what lies under it.
+    frequency_mhz : ndarray[frequency]
+        Frequency, MHz.
 
     Returns
     -------
-    Mirror
+    ndarray[point, frequency]
+        |(r1 + r2 e^(2 i d)) / (1 + r1 r2 e^(2 i d))|^2 with r1 and r2 of the two faces and d the phase
+        across the layer (Born and Wolf, Principles of Optics, section 1.6.4), mean of the
+        two polarisations. What the lossy layer absorbs it emits: emissivity is 1 less this.
     """
-    cosine_limb = float(np.cos(limb_angle_rad))
-
-    def columns(cosine: NDArray[np.float64]) -> NDArray[np.float64]:
-        from_nadir = np.arccos(np.clip(cosine, -1.0, 1.0))
-        if not sphere:
-            weight = fresnel_reflectivity(-cosine, permittivity)
-            return np.stack([np.ones_like(cosine), -2.0 * cosine, weight], axis=1)
-        return _sphere_columns(grazing_angle_rad(from_nadir, limb_angle_rad), limb_angle_rad, permittivity)
-
-    table = cubic_table(columns, -1.0, cosine_limb, tolerance=MIRROR_TOLERANCE, intervals=128, cap=4096)
-    table.flags.writeable = False  # it is shared by all who ask for the same mirror
-    return Mirror(table, cosine_limb)
-
-
-def image_angle_rad(grazing_rad: NDArray[np.float64], limb_angle_rad: float) -> NDArray[np.float64]:
-    """Angle from the nadir at which a ray of this grazing angle leaves the sphere for the antenna, rad."""
-    return np.asarray(np.arcsin(np.sin(limb_angle_rad) * np.cos(grazing_rad)))
+    cosine = np.asarray(cosine_incidence, dtype=float)
+    inside = permittivity * (1.0 + 1j * layer.loss_tangent)
+    wave_per_m = 2.0 * np.pi * frequency_mhz * 1e6 / SPEED_OF_LIGHT_M_PER_S
+    phase = wave_per_m * layer.thickness_m * np.sqrt(inside - 1.0 + cosine**2 + 0j)[:, None]
+    turned = np.exp(2j * phase)
+    total = np.zeros(turned.shape)
+    upper = _amplitudes(cosine, 1.0, inside)
+    lower = _amplitudes(cosine, inside, layer.permittivity)
+    for first, second in zip(upper, lower, strict=True):
+        r1, r2 = first[:, None], second[:, None]
+        total += 0.5 * np.abs((r1 + r2 * turned) / (1.0 + r1 * r2 * turned)) ** 2
+    return total
 
 
-def source_angle_rad(grazing_rad: NDArray[np.float64], limb_angle_rad: float) -> NDArray[np.float64]:
-    """Angle from the nadir from which that ray came: the image's plus twice the grazing angle, rad."""
-    return np.asarray(image_angle_rad(grazing_rad, limb_angle_rad) + 2.0 * grazing_rad)
+def _amplitudes(cosine: FloatArray, above: complex, below: complex) -> tuple[NDArray[np.complex128], ...]:
+    """Fresnel amplitudes across and along the plane of incidence, by the cosine of incidence in vacuum.
+
+    Slightly negative cosines continue the functions smoothly beyond grazing; one of them breaks
+    at -1 / sqrt(1 + permittivity).
+    """
+    c = cosine
+    root_above = c + 0j if above == 1.0 else np.sqrt(above - 1.0 + c**2 + 0j)
+    root_below = np.sqrt(below - 1.0 + c**2 + 0j)
+    if above == below:
+        return np.zeros_like(root_below), np.zeros_like(root_below)
+    across = (root_above - root_below) / (root_above + root_below)
+    along = (below * root_above - above * root_below) / (below * root_above + above * root_below)
+    return across, along
 
 
-def grazing_angle_rad(from_nadir_rad: NDArray[np.float64], limb_angle_rad: float) -> NDArray[np.float64]:
-    """Grazing angle of the ray that comes from these angles, rad: Newton's method, the slope lies between 1 and 2."""
-    grazing = np.clip(0.5 * (from_nadir_rad - limb_angle_rad), 0.0, np.pi / 2)
-    for _ in range(NEWTON_STEPS):
-        excess = source_angle_rad(grazing, limb_angle_rad) - from_nadir_rad
-        grazing = np.clip(grazing - excess / (2.0 + _image_rate(grazing, limb_angle_rad)), 0.0, np.pi / 2)
-    return grazing
+def reflectivity_table(surface: Surface, frequency_mhz: FloatArray) -> FloatArray:
+    """Reflectivity tabulated against the cosine of incidence, from a little below 0 to 1.
+
+    Parameters
+    ----------
+    surface : Surface
+        The ``[surface]`` table; without reflection all is zero.
+    frequency_mhz : ndarray[frequency]
+        Frequency, MHz.
+
+    Returns
+    -------
+    ndarray[interval, 4, frequency or 1]
+        Cubics on equal intervals from `lowest_cosine` to 1; one column where frequency does
+        not matter.
+    """
+
+    def columns(cosine: FloatArray) -> FloatArray:
+        if not surface.reflection:
+            return np.zeros((len(cosine), 1))
+        if surface.layer is None:
+            return fresnel_reflectivity(cosine, surface.permittivity)[:, None]
+        return layered_reflectivity(cosine, surface.permittivity, surface.layer, frequency_mhz)
+
+    return cubic_table(columns, lowest_cosine(surface), 1.0, tolerance=REFLECTIVITY_TOLERANCE, intervals=512, cap=65536)
 
 
-def _image_rate(grazing_rad: NDArray[np.float64], limb_angle_rad: float) -> NDArray[np.float64]:
-    """Change of the image's angle with the grazing angle."""
-    sine = np.sin(limb_angle_rad)
-    return np.asarray(-sine * np.sin(grazing_rad) / np.sqrt(1.0 - (sine * np.cos(grazing_rad)) ** 2))
+def lowest_cosine(surface: Surface) -> float:
+    """Where the table of the reflectivity begins: half the way to where its continuation breaks."""
+    densest = surface.permittivity if surface.layer is None else max(surface.permittivity, surface.layer.permittivity)
+    return float(-0.5 / np.sqrt(1.0 + densest))
 
 
-def _sphere_columns(grazing: NDArray[np.float64], limb_angle_rad: float, permittivity: float) -> NDArray[np.float64]:
-    sine_limb = np.sin(limb_angle_rad)
-    image = image_angle_rad(grazing, limb_angle_rad)
-    source = image + 2.0 * grazing
-    image_rate = _image_rate(grazing, limb_angle_rad)
-    # At the zenith both sines vanish; their ratio tends to that of the angles.
-    overhead = np.pi / 2 - grazing < 1e-6
-    ratio = np.where(
-        overhead,
-        sine_limb / (2.0 - sine_limb),
-        np.sin(image) / np.where(overhead, 1.0, np.sin(source)),
-    )
-    along_nadir = np.cos(image) - ratio * np.cos(source)
-    compression = ratio * np.abs(image_rate) / (image_rate + 2.0)
-    weight = compression * fresnel_reflectivity(np.sin(grazing), permittivity)
-    return np.stack([ratio, along_nadir, weight], axis=1)
+def surface_brightness_k(surface: Surface, frequency_mhz: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Rayleigh-Jeans brightness of the surface where it is black: on the equator, and what the poles lack of it.
+
+    Parameters
+    ----------
+    surface : Surface
+        Temperature at the equator (or everywhere), at the poles, and the exponent with which
+        both change with frequency: deeper layers are seen at lower ones.
+    frequency_mhz : ndarray[frequency]
+        Frequency, MHz.
+
+    Returns
+    -------
+    equator_k, change_k : ndarray[frequency]
+        Brightness is equator_k + change_k sin^2(latitude), K.
+    """
+    ratio = np.ones_like(frequency_mhz)
+    if surface.temperature_frequency_mhz is not None:
+        ratio = (frequency_mhz / surface.temperature_frequency_mhz) ** surface.temperature_exponent
+    equator = rayleigh_jeans_k(surface.temperature_k * ratio, frequency_mhz)
+    if surface.polar_temperature_k is None:
+        return equator, np.zeros_like(equator)
+    return equator, rayleigh_jeans_k(surface.polar_temperature_k * ratio, frequency_mhz) - equator

@@ -1,47 +1,33 @@
-"""Where things are round the Moon: its pole, the Earth and the Sun seen from it, and a circular orbit.
+"""A spacecraft round the Moon by its elements: a Kepler ellipse whose node and pericentre drift.
 
-Stands below `sims.vantage`, which turns these places into what the antenna sees and what is
-hidden from it. Vectors are on ICRS axes, in km, from the Moon's centre. Places of bodies are
-geometric: neither light time nor aberration is applied, which leaves up to 21 arcsec in the
-direction of the Sun and 1 arcsec in that of the Earth.
+Stands below `sims.view`. Vectors are on ICRS axes, in km, from the Moon's centre. The only
+perturbation is the secular one of the Moon's oblateness (J2), and the elements are mean ones: the
+osculating semi-major axis swings up to 1 km about the mean, and taking one for the other
+puts a low orbiter tens of km out of place within a day. Left out are
+
+* the oscillations that J2 adds within an orbit: 0.4 km in place (measured in the tests);
+* the mass concentrations and all other harmonics: they change the eccentricity of an orbit
+  100 km up by some thousandths, its height by 10 km, within weeks (from memory);
+* the pull of the Earth and the Sun, as strong as J2 some 1400 km up and growing fast beyond.
+
+Where that counts, give an orbit file.
 """
 
 from __future__ import annotations
 
-import warnings
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
 from dataclasses import dataclass
 
-import astropy.units as u
-import erfa
 import numpy as np
-from astropy.coordinates import get_body_barycentric
 from astropy.time import Time
-from astropy.utils import iers
 from numpy.typing import NDArray
-from scipy.interpolate import CubicSpline
 
-from sims.config import LunarOrbit
-from sims.constants import MOON_GM_KM3_PER_S2, MOON_MEAN_RADIUS_KM
+from sims.config_vantage import LunarOrbit
+from sims.constants import MOON_GM_KM3_PER_S2, MOON_J2, MOON_J2_RADIUS_KM, MOON_MEAN_RADIUS_KM
+from sims.ephemeris import offline_time_scales
+from sims.moon_frame import lunar_equator_axes
 
-NODE_STEP_S = 21_600.0  # between nodes of slow functions of time; the error this leaves is in `smooth_in_time`
-_FEWEST_NODES = 8
-_J2000 = 2_451_545.0
-
-# Rotation series of the Moon, Archinal et al. 2018, Celest. Mech. Dyn. Astron. 130, 22 (from memory; the tests hold it
-# against the librations of DE421): angles E1 to E13 at J2000 and their rates per day, and the terms of the pole.
-_ANGLE_DEG = np.array(
-    [125.045, 250.089, 260.008, 176.625, 357.529, 311.589, 134.963, 276.617, 34.226, 15.134, 119.743, 239.961, 25.053]
-)
-_RATE_DEG_PER_DAY = np.array(
-    [
-        *(-0.0529921, -0.1059842, 13.0120009, 13.3407154, 0.9856003, 26.4057084, 13.0649930),
-        *(0.3287146, 1.7484877, -0.1589763, 0.0036096, 0.1643573, 12.9590088),
-    ]
-)
-_RA_SIN_DEG = np.array([-3.8787, -0.1204, 0.0700, -0.0172, 0, 0.0072, 0, 0, 0, -0.0052, 0, 0, 0.0043])
-_DEC_COS_DEG = np.array([1.5419, 0.0239, -0.0278, 0.0068, 0, -0.0029, 0.0009, 0, 0, 0.0008, 0, 0, -0.0009])
+FloatArray = NDArray[np.float64]
+_NEWTON_STEPS = 60
 
 
 @dataclass(frozen=True)
@@ -50,198 +36,191 @@ class OrbitTrack:
 
     Parameters
     ----------
-    position_km : ndarray[time, axis]
-        From the Moon's centre, ICRS axes, km.
-    forward : ndarray[time, axis]
-        Unit vector of the motion relative to the Moon's centre, ICRS axes.
+    position_km, velocity_km_per_s : ndarray[time, axis]
+        Relative to the Moon's centre, ICRS axes, km and km/s.
     phase : ndarray[time]
-        Argument of latitude over a whole turn, 0 to 1 (below 1), from the ascending node.
+        True argument of latitude over a whole turn, 0 to 1 (below 1), from the ascending node.
     """
 
-    position_km: NDArray[np.float64]
-    forward: NDArray[np.float64]
-    phase: NDArray[np.float64]
+    position_km: FloatArray
+    velocity_km_per_s: FloatArray
+    phase: FloatArray
 
 
-@contextmanager
-def offline_time_scales() -> Iterator[None]:
-    """Convert time scales with the installed leap seconds alone: nothing is fetched, far years pass in silence.
-
-    At the first use of UTC astropy would fetch a new table once the installed one nears its
-    end, and ERFA calls years well beyond it dubious at each conversion; the geometry product
-    states instead, once, that no further leap second is assumed.
-    """
-    with warnings.catch_warnings(), iers.conf.set_temp("auto_download", False):
-        warnings.filterwarnings("ignore", message=".*dubious year", category=erfa.ErfaWarning)
-        yield
-
-
-def elapsed_s(times: Time) -> NDArray[np.float64]:
-    """Seconds (TT) since the first of `times`.
+@dataclass(frozen=True)
+class DriftRates:
+    """Secular rates of an orbit.
 
     Parameters
     ----------
-    times : Time[time]
-        Instants in any scale.
-
-    Returns
-    -------
-    ndarray[time]
-        Elapsed time, s.
+    node_rad_per_s, pericentre_rad_per_s, mean_anomaly_rad_per_s : float
+        The mean anomaly's holds the mean motion itself.
     """
-    tt = times.tt
-    return np.asarray(((tt.jd1 - tt.jd1[0]) + (tt.jd2 - tt.jd2[0])) * 86_400.0)
+
+    node_rad_per_s: float
+    pericentre_rad_per_s: float
+    mean_anomaly_rad_per_s: float
 
 
-def smooth_in_time(
-    function: Callable[[Time], NDArray[np.float64]], times: Time, node_step_s: float = NODE_STEP_S
-) -> NDArray[np.float64]:
-    """Evaluate a slow function of time at many instants through a cubic spline.
+def period_s(altitude_km: float) -> float:
+    """Period of an orbit round a point-mass Moon, s, by the height of its semi-major axis above the mean radius, km.
 
-    Where there are no more instants than nodes the function itself is called. With the
-    default step the directions of the Earth and Sun from the Moon are within 0.05 arcsec of
-    the function itself (the tests measure it).
-
-    Parameters
-    ----------
-    function : callable
-        Takes a Time[node] and returns ndarray[node, ...].
-    times : Time[time]
-        Instants in any scale and order.
-    node_step_s : float
-        Greatest step between nodes, s.
-
-    Returns
-    -------
-    ndarray[time, ...]
-        The function's values.
-    """
-    tt = times.tt
-    elapsed = elapsed_s(times)
-    first, last = float(elapsed.min()), float(elapsed.max())
-    count = max(int(np.ceil((last - first) / node_step_s)) + 1, _FEWEST_NODES)
-    if elapsed.size <= count:
-        return function(times)
-    nodes = np.linspace(first, last, count)
-    values = function(Time(tt.jd1[0], tt.jd2[0] + nodes / 86_400.0, format="jd", scale="tt"))
-    return np.asarray(CubicSpline(nodes, values)(elapsed))
-
-
-def earth_sun_from_moon_km(times: Time) -> NDArray[np.float64]:
-    """Geometric places of the Earth's and the Sun's centre from the Moon's.
-
-    Parameters
-    ----------
-    times : Time[time]
-        Instants in any scale.
-
-    Returns
-    -------
-    ndarray[time, body, axis]
-        Earth (body 0) and Sun (body 1), ICRS axes, km. From astropy's built-in ephemeris
-        (ERFA epv00 and moon98); against DE421 the Earth is within 12 arcsec and the Sun
-        within 0.1 arcsec.
-    """
-    with offline_time_scales():
-        tdb = times.tdb
-    earth, moon, sun = (
-        get_body_barycentric(body, tdb, ephemeris="builtin").xyz.to_value(u.km).T for body in ("earth", "moon", "sun")
-    )
-    return np.stack([earth - moon, sun - moon], axis=1)
-
-
-def moon_pole_deg(times: Time) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """The Moon's north pole of rotation.
-
-    Parameters
-    ----------
-    times : Time[...]
-        Instants in any scale.
-
-    Returns
-    -------
-    right_ascension_deg, declination_deg : ndarray[...]
-        ICRS, deg; the rotation series of Archinal et al. 2018, Celest. Mech. Dyn. Astron.
-        130, 22, good to about 15 arcsec.
-    """
-    with offline_time_scales():
-        tdb = times.tdb
-    days = np.asarray((tdb.jd1 - _J2000) + tdb.jd2)
-    centuries = days / 36_525.0
-    angles = np.deg2rad(_ANGLE_DEG + days[..., None] * _RATE_DEG_PER_DAY)
-    right_ascension = 269.9949 + 0.0031 * centuries + np.sin(angles) @ _RA_SIN_DEG
-    declination = 66.5392 + 0.0130 * centuries + np.cos(angles) @ _DEC_COS_DEG
-    return np.asarray(right_ascension), np.asarray(declination)
-
-
-def lunar_equator_axes(instant: Time) -> NDArray[np.float64]:
-    """Axes of the Moon's mean equator: first to its ascending node on the ICRS equator, third to its pole.
-
-    Parameters
-    ----------
-    instant : Time
-        One instant.
-
-    Returns
-    -------
-    ndarray[axis of the equator, axis]
-        Unit vectors in rows, ICRS axes. The first is the IAU node, at right ascension of
-        the pole + 90 deg and declination 0.
-    """
-    right_ascension_deg, declination_deg = moon_pole_deg(instant)
-    ra, dec = np.deg2rad(float(right_ascension_deg)), np.deg2rad(float(declination_deg))
-    node = np.array([-np.sin(ra), np.cos(ra), 0.0])
-    pole = np.array([np.cos(dec) * np.cos(ra), np.cos(dec) * np.sin(ra), np.sin(dec)])
-    return np.stack([node, np.cross(pole, node), pole])
-
-
-def circular_period_s(altitude_km: float) -> float:
-    """Period of a circular orbit round a point-mass Moon.
-
-    Parameters
-    ----------
-    altitude_km : float
-        Height above the Moon's mean radius, km.
-
-    Returns
-    -------
-    float
-        Period, s; Kepler's third law.
+    Kepler's third law.
     """
     return float(2.0 * np.pi * np.sqrt((MOON_MEAN_RADIUS_KM + altitude_km) ** 3 / MOON_GM_KM3_PER_S2))
 
 
-def circular_orbit(orbit: LunarOrbit, times: Time) -> OrbitTrack:
-    """Move along a circular orbit fixed in inertial space.
+def drift_rates(orbit: LunarOrbit) -> DriftRates:
+    """Secular rates of the elements, to first order in J2.
 
     Parameters
     ----------
     orbit : LunarOrbit
-        Elements at the first of `times`. Inclination and node refer to the Moon's mean
-        equator of that instant; the node is counted eastward along it from its ascending
-        node on the ICRS equator, the phase from the orbit's ascending node.
+        Elements; without oblateness only the mean anomaly moves.
+
+    Returns
+    -------
+    DriftRates
+        Kaula 1966, Theory of Satellite Geodesy, section 3.6 (from memory; the tests hold them
+        against an integrated orbit). The semi-major axis is the mean one.
+    """
+    axis_km = MOON_MEAN_RADIUS_KM + orbit.altitude_km
+    mean_motion = np.sqrt(MOON_GM_KM3_PER_S2 / axis_km**3)
+    if not orbit.oblateness:
+        return DriftRates(0.0, 0.0, float(mean_motion))
+    shape = 1.0 - orbit.eccentricity**2
+    strength = 0.75 * mean_motion * MOON_J2 * (MOON_J2_RADIUS_KM / axis_km) ** 2 / shape**2
+    cosine = np.cos(np.deg2rad(orbit.inclination_deg))
+    return DriftRates(
+        node_rad_per_s=float(-2.0 * strength * cosine),
+        pericentre_rad_per_s=float(strength * (5.0 * cosine**2 - 1.0)),
+        mean_anomaly_rad_per_s=float(mean_motion + strength * np.sqrt(shape) * (3.0 * cosine**2 - 1.0)),
+    )
+
+
+def eccentric_anomaly_rad(mean_anomaly_rad: FloatArray, eccentricity: float) -> FloatArray:
+    """Solve Kepler's equation M = E - e sin E to rounding.
+
+    Parameters
+    ----------
+    mean_anomaly_rad : ndarray[time]
+        Mean anomaly, rad, of any size.
+    eccentricity : float
+        0 to below 1.
+
+    Returns
+    -------
+    ndarray[time]
+        Eccentric anomaly, rad, -pi to pi: Newton's method from E = pi, whence it falls onto
+        the root without overshoot for every ellipse (the function is convex there), until
+        rounding makes it rise.
+    """
+    mean = np.mod(np.asarray(mean_anomaly_rad, dtype=float) + np.pi, 2.0 * np.pi) - np.pi
+    size = np.abs(mean)
+    anomaly = np.full_like(size, np.pi)
+    for _ in range(_NEWTON_STEPS):
+        step = (anomaly - eccentricity * np.sin(anomaly) - size) / (1.0 - eccentricity * np.cos(anomaly))
+        # Rounding alone asks for a step back: the root is reached.
+        anomaly = np.maximum(anomaly - np.maximum(step, 0.0), size)
+        if step.max(initial=0.0) <= 1e-15:
+            break
+    return np.asarray(np.copysign(anomaly, mean))
+
+
+def lunar_orbit(orbit: LunarOrbit, times: Time, start: Time) -> OrbitTrack:
+    """Move along an orbit.
+
+    Parameters
+    ----------
+    orbit : LunarOrbit
+        Elements at its epoch, or at `start` where it names none. Inclination and node refer
+        to the Moon's mean equator of that instant; the node is counted eastward along it from its
+        ascending node on the ICRS equator, the pericentre from the orbit's ascending node;
+        the phase is the mean argument of latitude, pericentre plus mean anomaly.
     times : Time[time]
         Instants in any scale.
+    start : Time
+        Start of the observation.
 
     Returns
     -------
     OrbitTrack
-        Places, directions of motion and phases. The Moon is a point mass: nothing
-        perturbs the orbit.
+        The velocity is that on the ellipse of the moment: what the drift adds, up to 6 parts
+        in 10^4 (1 m/s), is left out.
     """
-    equator = lunar_equator_axes(times[0])
-    node, inclination = np.deg2rad(orbit.node_deg), np.deg2rad(orbit.inclination_deg)
-    to_node = np.array([np.cos(node), np.sin(node), 0.0]) @ equator
-    to_crest = (
-        np.array([-np.sin(node) * np.cos(inclination), np.cos(node) * np.cos(inclination), np.sin(inclination)])
-        @ equator
-    )
-    turns = orbit.phase_deg / 360.0 + elapsed_s(times) / circular_period_s(orbit.altitude_km)
-    phase = turns - np.floor(turns)
-    phase = np.where(phase < 1.0, phase, 0.0)
-    cosine, sine = np.cos(2.0 * np.pi * phase)[:, None], np.sin(2.0 * np.pi * phase)[:, None]
+    epoch = start if orbit.epoch is None else _instant(orbit)
+    equator = lunar_equator_axes(epoch)
+    elapsed = _seconds_between(epoch, times)
+    rates = drift_rates(orbit)
+    node = np.deg2rad(orbit.node_deg) + rates.node_rad_per_s * elapsed
+    pericentre = np.deg2rad(orbit.pericentre_deg) + rates.pericentre_rad_per_s * elapsed
+    mean = np.deg2rad(orbit.phase_deg - orbit.pericentre_deg) + rates.mean_anomaly_rad_per_s * elapsed
+    axis_km, e = MOON_MEAN_RADIUS_KM + orbit.altitude_km, orbit.eccentricity
+    anomaly = eccentric_anomaly_rad(mean, e)
+    root = np.sqrt(1.0 - e**2)
+    along, across = np.cos(anomaly) - e, root * np.sin(anomaly)
+    speed = np.sqrt(MOON_GM_KM3_PER_S2 / axis_km) / (1.0 - e * np.cos(anomaly))
+    to_node, to_crest = _plane(node, np.deg2rad(orbit.inclination_deg), equator)
+    cosine, sine = np.cos(pericentre)[:, None], np.sin(pericentre)[:, None]
+    to_pericentre, ahead = cosine * to_node + sine * to_crest, cosine * to_crest - sine * to_node
+    turns = (pericentre + np.arctan2(across, along)) / (2.0 * np.pi)
     return OrbitTrack(
-        position_km=(MOON_MEAN_RADIUS_KM + orbit.altitude_km) * (cosine * to_node + sine * to_crest),
-        forward=cosine * to_crest - sine * to_node,
-        phase=phase,
+        position_km=axis_km * (along[:, None] * to_pericentre + across[:, None] * ahead),
+        velocity_km_per_s=(speed * -np.sin(anomaly))[:, None] * to_pericentre
+        + (speed * root * np.cos(anomaly))[:, None] * ahead,
+        phase=whole_turn(turns),
     )
+
+
+def argument_of_latitude(position_km: FloatArray, velocity_km_per_s: FloatArray, equator: FloatArray) -> FloatArray:
+    """True argument of latitude of states, over a whole turn.
+
+    Parameters
+    ----------
+    position_km, velocity_km_per_s : ndarray[time, axis]
+        States relative to the Moon's centre, ICRS axes.
+    equator : ndarray[axis of the equator, axis]
+        From `sims.moon_frame.lunar_equator_axes`.
+
+    Returns
+    -------
+    ndarray[time]
+        0 to 1 (below 1), from the ascending node of the orbit of the moment; of an orbit in
+        the equator's plane, from the equator's first axis.
+    """
+    momentum = np.cross(position_km, velocity_km_per_s)
+    node = np.cross(equator[2], momentum)
+    length = np.linalg.norm(node, axis=-1, keepdims=True)
+    level = length < 1e-12 * np.linalg.norm(momentum, axis=-1, keepdims=True)
+    node = np.where(level, equator[0], node / np.where(level, 1.0, length))
+    crest = np.cross(momentum / np.linalg.norm(momentum, axis=-1, keepdims=True), node)
+    turns = np.arctan2(np.einsum("ta,ta->t", position_km, crest), np.einsum("ta,ta->t", position_km, node)) / (
+        2.0 * np.pi
+    )
+    return whole_turn(turns)
+
+
+def whole_turn(turns: FloatArray) -> FloatArray:
+    """The fraction of turns, 0 to below 1."""
+    fraction = turns - np.floor(turns)
+    return np.asarray(np.where(fraction < 1.0, fraction, 0.0))
+
+
+def _plane(node_rad: FloatArray, inclination_rad: float, equator: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Unit vectors to the ascending node and a quarter turn on, ICRS axes: ndarray[time, axis] twice."""
+    cosine, sine, tilt = np.cos(node_rad), np.sin(node_rad), np.full_like(node_rad, np.sin(inclination_rad))
+    to_node = np.stack([cosine, sine, np.zeros_like(cosine)], axis=-1) @ equator
+    lean = np.cos(inclination_rad)
+    return to_node, np.stack([-sine * lean, cosine * lean, tilt], axis=-1) @ equator
+
+
+def _instant(orbit: LunarOrbit) -> Time:
+    assert orbit.epoch is not None
+    with offline_time_scales():
+        return Time(orbit.epoch.replace(tzinfo=None), scale="utc").tt
+
+
+def _seconds_between(epoch: Time, times: Time) -> FloatArray:
+    with offline_time_scales():
+        tt, zero = times.tt, epoch.tt
+    return np.asarray(((tt.jd1 - zero.jd1) + (tt.jd2 - zero.jd2)) * 86_400.0)

@@ -1,8 +1,8 @@
-"""The angular part of the engine: beam-weighted sums over the pixels of the sky, in numba.
+"""The angular part of the engine: beam-weighted sums over the pixels of the sky.
 
-Plain arrays in, plain arrays out; `sims.sky_average` does the bookkeeping. For every sample
-each pixel adds its brightness times the beam towards it where it stands clear of the limb,
-and its brightness times the beam towards its mirror image in the body below.
+Plain arrays in, plain arrays out: `sims.pixel_kernel` has the loops, `sims.sky_average` does
+the bookkeeping. For every sample each pixel adds its brightness times the beam towards it
+where it stands clear of the limb, and its brightness times the beam towards its mirror image in the body below.
 """
 
 from __future__ import annotations
@@ -11,16 +11,16 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit, prange
 from numpy.typing import NDArray
 
-from sims.beam import Beam
-from sims.moon import Mirror
-from sims.profile import cubic_table
+from sims.horizon import Horizon
+from sims.limb import TAPER
+from sims.mirror import Mirror
+from sims.pixel_kernel import sum_samples
 
 FloatArray = NDArray[np.float64]
 CHUNK_SAMPLES = 64
-FEWEST_INTERVALS = 1024
+_NO_HORIZON = np.zeros(1)
 
 
 @dataclass(frozen=True)
@@ -29,182 +29,164 @@ class Pointing:
 
     Attributes
     ----------
-    axes : ndarray[time, factor, 3]
-        Axes of the beam's profiles in ICRS.
+    axes : ndarray[time, factor or 3, 3]
+        Axes of the beam in ICRS: those of its profiles, or x, y and z of a tabulated one.
     nadir : ndarray[time, 3]
         Unit vectors to the centre of the body below, ICRS.
     limb_angle_rad : ndarray[time]
         Angle from nadir to limb, rad.
+    north : ndarray[time, 3]
+        Unit vectors to the north along the ground, ICRS, from which a horizon's azimuth counts.
+    pole : ndarray[time, 3]
+        Unit vectors to the north pole of the body below, ICRS.
     """
 
     axes: FloatArray
     nadir: FloatArray
     limb_angle_rad: FloatArray
+    north: FloatArray
+    pole: FloatArray
 
     def part(self, rows: slice | NDArray[np.int64]) -> Pointing:
         """Some of the samples."""
-        return Pointing(self.axes[rows], self.nadir[rows], self.limb_angle_rad[rows])
+        return Pointing(self.axes[rows], self.nadir[rows], self.limb_angle_rad[rows], self.north[rows], self.pole[rows])
 
     def __len__(self) -> int:
         return len(self.nadir)
 
 
-def beam_tables(beam: Beam, frequency_mhz: FloatArray) -> FloatArray:
-    """Profiles of a beam tabulated for the kernel.
+@dataclass(frozen=True)
+class Pattern:
+    """A beam at some frequencies, in one of the two forms the kernel reads; the other is empty.
 
-    Parameters
+    Attributes
     ----------
-    beam : Beam
-    frequency_mhz : ndarray[frequency]
-        Frequency, MHz.
-
-    Returns
-    -------
-    ndarray[factor, interval, 4, frequency]
-        Cubics in the cosine, all factors on the same intervals.
+    profiles : ndarray[factor, interval, 4, frequency]
+        Cubics in the cosine to each axis, from -1 to 1; the pattern is their product.
+    grid : ndarray[theta cell + 3, phi cell + 3, frequency]
+        Spline coefficients of a tabulated pattern (`sims.beam_spline`).
+    layout : ndarray[5]
+        Start and scale of the grid.
     """
 
-    def tabulate(profile: Callable[[FloatArray, FloatArray], FloatArray], intervals: int) -> FloatArray:
-        return cubic_table(lambda x: profile(frequency_mhz, x), -1.0, 1.0, tolerance=1e-12, intervals=intervals)
+    profiles: FloatArray
+    grid: FloatArray
+    layout: FloatArray
 
-    tables = [tabulate(profile, FEWEST_INTERVALS) for profile in beam.profiles]
-    most = max(table.shape[0] for table in tables)
-    same = [
-        table if table.shape[0] == most else tabulate(profile, most)
-        for table, profile in zip(tables, beam.profiles, strict=True)
-    ]
-    return np.stack(same)
+
+@dataclass(frozen=True)
+class Ground:
+    """What the body below does with the sky, in the form the kernel reads.
+
+    Attributes
+    ----------
+    mirror : Mirror or None
+        None where nothing is reflected.
+    reflectivity : ndarray[interval, 4, frequency or 1]
+        Cubics in the cosine of incidence, from `lowest_cosine` to 1.
+    lowest_cosine : float
+        See `sims.moon`.
+    horizon : Horizon or None
+        None where it is level.
+    warmer_poles : bool
+        Whether the temperature depends on latitude, so that `PixelSums.polar` is wanted.
+    sphere : bool
+        True where the body below is a sphere seen from a distance.
+    """
+
+    mirror: Mirror | None
+    reflectivity: FloatArray
+    lowest_cosine: float
+    horizon: Horizon | None
+    warmer_poles: bool
+    sphere: bool
+
+
+@dataclass(frozen=True)
+class PixelSums:
+    """Beam-weighted means, each over the beam's sum over the whole sphere.
+
+    Attributes
+    ----------
+    sky_k : ndarray[time, frequency]
+        Of the sky, straight and mirrored, K.
+    response : ndarray[time, frequency]
+        The same for a sky of unit brightness.
+    polar : ndarray[time, frequency]
+        Of the surface's emissivity times the squared sine of its latitude; zero unless wanted.
+    beam_sum : ndarray[time, frequency]
+        Sum of the beam over the whole sphere, which the means are over.
+    """
+
+    sky_k: FloatArray
+    response: FloatArray
+    polar: FloatArray
+    beam_sum: FloatArray
 
 
 def pixel_sums(
     directions: FloatArray,
+    weights: FloatArray,
     brightness_k: FloatArray,
-    tables: FloatArray,
+    pattern: Pattern,
     pointing: Pointing,
-    mirror: Mirror | None,
-    pixel_angle_rad: float,
+    ground: Ground,
+    taper_rad: float,
     advance: Callable[[int], None],
-) -> tuple[FloatArray, FloatArray]:
-    """Sky brightness and response of every sample.
+) -> PixelSums:
+    """Sum over the pixels for every sample.
 
     Parameters
     ----------
     directions : ndarray[pixel, 3]
         Unit vectors of pixel centres, ICRS.
+    weights : ndarray[pixel]
+        Quadrature weights of `sims.pixels`.
     brightness_k : ndarray[pixel, frequency]
         Sky brightness, K, C-contiguous.
-    tables : ndarray[factor, interval, 4, frequency]
-        From `beam_tables`.
+    pattern : Pattern
     pointing : Pointing
-    mirror : Mirror or None
-        None where nothing is reflected.
-    pixel_angle_rad : float
-        Width of the ramp that the limb is, rad.
+    ground : Ground
+    taper_rad : float
+        Half the width of the taper that the limb is, rad.
     advance : callable
         Told the number of samples done, for a progress bar.
 
     Returns
     -------
-    sky_k : ndarray[time, frequency]
-        Beam-weighted sum of the sky over the beam's sum over the whole sphere, K.
-    response : ndarray[time, frequency]
-        The same for a sky of unit brightness.
+    PixelSums
     """
     shape = (len(pointing), brightness_k.shape[1])
-    sky_k, response = np.empty(shape), np.empty(shape)
-    mirror_table = np.zeros((1, 4, 3)) if mirror is None else mirror.table
+    sky_k, response, polar, beam_sum = (np.empty(shape) for _ in range(4))
+    level = ground.horizon is None
+    horizon_table = _NO_HORIZON if ground.horizon is None else ground.horizon.table
     for rows in _chunks(len(pointing)):
         part = pointing.part(rows)
-        cosine_limb = np.cos(part.limb_angle_rad)
-        ramp = 1.0 / (pixel_angle_rad * np.sin(part.limb_angle_rad))
-        _sum_samples(
-            directions, brightness_k, tables, part.axes, part.nadir, cosine_limb, ramp,
-            mirror_table, mirror is not None, sky_k[rows], response[rows],
+        cosine_hidden, cosine_clear = _undoubted(part, ground, taper_rad)
+        if ground.mirror is None:
+            mirror_tables, cosine_last = np.zeros((1, 1, 4, 4)), np.full(len(part), -2.0)
+        else:
+            mirror_tables, cosine_last = ground.mirror.at_limb_angles(part.limb_angle_rad)
+        sum_samples(
+            directions, weights, brightness_k, pattern.profiles, pattern.grid, pattern.layout, part.axes,
+            part.nadir, part.north, np.cross(part.nadir, part.north), part.pole,
+            part.limb_angle_rad, cosine_hidden, cosine_clear, taper_rad, TAPER, level, horizon_table,
+            mirror_tables, cosine_last, ground.reflectivity, ground.lowest_cosine, ground.warmer_poles, ground.sphere,
+            sky_k[rows], response[rows], polar[rows], beam_sum[rows],
         )  # fmt: skip
         advance(len(part))
-    return sky_k, response
+    return PixelSums(sky_k, response, polar, beam_sum)
+
+
+def _undoubted(pointing: Pointing, ground: Ground, taper_rad: float) -> tuple[FloatArray, FloatArray]:
+    """Cosines from the nadir above which a direction is hidden, and below which it is clear, without a further look."""
+    lowest, highest = pointing.limb_angle_rad, pointing.limb_angle_rad
+    if ground.horizon is not None:
+        lowest = np.full(len(pointing), np.pi / 2 + ground.horizon.lowest_rad)
+        highest = np.full(len(pointing), np.pi / 2 + ground.horizon.highest_rad)
+    return np.cos(np.maximum(lowest - taper_rad, 0.0)), np.cos(np.minimum(highest + taper_rad, np.pi))
 
 
 def _chunks(count: int) -> Iterator[slice]:
     for start in range(0, count, CHUNK_SAMPLES):
         yield slice(start, min(start + CHUNK_SAMPLES, count))
-
-
-@njit(inline="always")
-def _cell(cosine, intervals):  # type: ignore[no-untyped-def]
-    """Interval of a table that a cosine falls into, and how far into it."""
-    scaled = (cosine + 1.0) * (0.5 * intervals)
-    cell = min(max(int(scaled), 0), intervals - 1)
-    return cell, scaled - cell
-
-
-@njit(inline="always")
-def _add_one(table, cosine, whole, weight, brightness_k, sums):  # type: ignore[no-untyped-def]
-    """Add a direction to the sums of a beam of one factor: whole beam, part that meets sky, sky."""
-    cell, t = _cell(cosine, table.shape[0])
-    c = table[cell]
-    for j in range(sums.shape[1]):
-        gain = ((c[3, j] * t + c[2, j]) * t + c[1, j]) * t + c[0, j]
-        sums[0, j] += whole * gain
-        sums[1, j] += weight * gain
-        sums[2, j] += weight * gain * brightness_k[j]
-
-
-@njit(inline="always")
-def _add_two(tables, first, second, whole, weight, brightness_k, sums):  # type: ignore[no-untyped-def]
-    """The same for a beam of two factors."""
-    cell, t = _cell(first, tables.shape[1])
-    c = tables[0, cell]
-    cell, u = _cell(second, tables.shape[1])
-    d = tables[1, cell]
-    for j in range(sums.shape[1]):
-        gain = ((c[3, j] * t + c[2, j]) * t + c[1, j]) * t + c[0, j]
-        gain *= ((d[3, j] * u + d[2, j]) * u + d[1, j]) * u + d[0, j]
-        sums[0, j] += whole * gain
-        sums[1, j] += weight * gain
-        sums[2, j] += weight * gain * brightness_k[j]
-
-
-@njit(inline="always")
-def _image(mirror_table, scaled):  # type: ignore[no-untyped-def]
-    """Mirror image of a direction: its two components and its weight."""
-    cell = min(max(int(scaled), 0), mirror_table.shape[0] - 1)
-    t = scaled - cell
-    m = mirror_table[cell]
-    along = ((m[3, 0] * t + m[2, 0]) * t + m[1, 0]) * t + m[0, 0]
-    down = ((m[3, 1] * t + m[2, 1]) * t + m[1, 1]) * t + m[0, 1]
-    weight = ((m[3, 2] * t + m[2, 2]) * t + m[1, 2]) * t + m[0, 2]
-    return along, down, weight
-
-
-@njit(parallel=True, cache=True, error_model="numpy", fastmath={"contract"})
-def _sum_samples(  # type: ignore[no-untyped-def]
-    directions, brightness_k, tables, axes, nadir, cosine_limb, ramp, mirror_table, mirrored, sky_k, response
-):
-    pixels, frequencies = brightness_k.shape
-    last = tables.shape[0] - 1
-    for s in prange(len(nadir)):
-        sums = np.zeros((3, frequencies))
-        one, two, down = axes[s, 0], axes[s, last], nadir[s]
-        one_down = one[0] * down[0] + one[1] * down[1] + one[2] * down[2]
-        two_down = two[0] * down[0] + two[1] * down[1] + two[2] * down[2]
-        mirror_scale = mirror_table.shape[0] / (cosine_limb[s] + 1.0)
-        for p in range(pixels):
-            x, y, z = directions[p, 0], directions[p, 1], directions[p, 2]
-            below = x * down[0] + y * down[1] + z * down[2]
-            first = x * one[0] + y * one[1] + z * one[2]
-            second = x * two[0] + y * two[1] + z * two[2]
-            whole, weight = 1.0, min(max(0.5 + (cosine_limb[s] - below) * ramp[s], 0.0), 1.0)
-            for _ in range(2 if mirrored and below < cosine_limb[s] else 1):
-                if last == 0:
-                    _add_one(tables[0], first, whole, weight, brightness_k[p], sums)
-                else:
-                    _add_two(tables, first, second, whole, weight, brightness_k[p], sums)
-                if whole == 1.0 and mirrored:
-                    along, towards, weight = _image(mirror_table, (below + 1.0) * mirror_scale)
-                    first = min(max(along * first + towards * one_down, -1.0), 1.0)
-                    second = min(max(along * second + towards * two_down, -1.0), 1.0)
-                    whole = 0.0
-        for j in range(frequencies):
-            sky_k[s, j] = sums[2, j] / sums[0, j]
-            response[s, j] = sums[1, j] / sums[0, j]

@@ -77,6 +77,10 @@ SPECTRA: Product = {
     "response_modes": Variable(
         ("mode", "bin", "channel"), "1", "change of the signal response that goes with each mode", required=False
     ),
+    "chromaticity_factor": Variable(
+        ("bin", "channel"), "1", "what the foreground was divided by for the beam's chromaticity", required=False
+    ),
+    "chromaticity_error": Variable(("bin", "channel"), "1", "standard deviation of that factor", required=False),
 }  # fmt: skip
 
 TRUTH: Product = {

@@ -18,8 +18,9 @@ from astropy.time import Time
 from astropy.utils import iers
 from numpy.typing import NDArray
 
-from sims.config import GroundSite
-from sims.orbit import offline_time_scales, smooth_in_time
+from sims.config_vantage import GroundSite
+from sims.constants import EARTH_ROTATION_RAD_PER_S
+from sims.ephemeris import offline_time_scales, smooth_in_time
 
 _log = logging.getLogger(__name__)
 _WGS84 = 1  # identifier of the ellipsoid in ERFA
@@ -33,8 +34,12 @@ class SiteTrack:
     ----------
     position_km : ndarray[time, axis]
         From the Earth's centre, ICRS axes, km.
+    velocity_km_per_s : ndarray[time, axis]
+        With the Earth's rotation, about its centre, ICRS axes, km/s.
     zenith, north : ndarray[time, axis]
         Unit vectors along the ellipsoid's normal and to the north, ICRS axes.
+    pole : ndarray[time, axis]
+        Unit vector along the axis of rotation, ICRS axes.
     sidereal_time_hours : ndarray[time]
         Apparent local sidereal time, hours, 0 to 24 (below 24).
     ut1_statement : str
@@ -42,8 +47,10 @@ class SiteTrack:
     """
 
     position_km: NDArray[np.float64]
+    velocity_km_per_s: NDArray[np.float64]
     zenith: NDArray[np.float64]
     north: NDArray[np.float64]
+    pole: NDArray[np.float64]
     sidereal_time_hours: NDArray[np.float64]
     ut1_statement: str
 
@@ -127,10 +134,14 @@ def site_track(site: GroundSite, times: Time) -> SiteTrack:
     # At longitude zero the ellipsoid gives the distances from the axis and from the equatorial plane.
     from_axis_m, _, from_equator_m = erfa.gd2gc(_WGS84, 0.0, latitude, site.height_m)
     sidereal_hours = np.mod((east_angle - origins_rad) * 12.0 / np.pi, 24.0)
+    position_km = to_icrs(float(from_axis_m) / 1e3, float(from_equator_m) / 1e3)
+    pole = to_icrs(0.0, 1.0)
     return SiteTrack(
-        position_km=to_icrs(float(from_axis_m) / 1e3, float(from_equator_m) / 1e3),
+        position_km=position_km,
+        velocity_km_per_s=EARTH_ROTATION_RAD_PER_S * np.cross(pole, position_km),
         zenith=to_icrs(float(np.cos(latitude)), float(np.sin(latitude))),
         north=to_icrs(-float(np.sin(latitude)), float(np.cos(latitude))),
+        pole=pole,
         sidereal_time_hours=np.where(sidereal_hours < 24.0, sidereal_hours, 0.0),
         ut1_statement=statement,
     )

@@ -1,205 +1,120 @@
-"""The diffuse sky at any frequency: a map, with a curved power law laid on each pixel and the CMB kept apart.
+"""The sky that ``[sky]`` describes: read or invented, corrected, ready for the engine.
 
-Takes what `sims.sky_maps` reads or `sims.sky_invented` makes, and gives the engine
-(`sims.sky_average`) directions and brightness. A curved power law is smooth in ln f, as
-the engine's expansion in frequency wants.
+The door to the files named ``sky_...``: the engine (`sims.sky_average`) and the campaign take what
+comes from here. A change of numbers alone moves a sky without reading its files again.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field, replace
+from dataclasses import replace
+from typing import Any
 
 import numpy as np
-from numpy.typing import ArrayLike, NDArray
+from numpy.typing import NDArray
 
-from sims.config import HealpixSky, ImageSky, InventedSky
-from sims.constants import CMB_TEMPERATURE_K, rayleigh_jeans_k
+from sims.config_sky import CubeSky, HealpixSky, ImageSky, InventedSky
+from sims.config_sky import JoinedSky as JoinedSettings
 from sims.errors import InputError, raise_if_any
-from sims.sky_invented import INVENTED_FREQUENCY_MHZ, gaussian_field, invented_index_map, invented_sky_map
-from sims.sky_maps import DiffuseMap, pixel_directions, read_healpix_map, read_image_map, read_index_map
+from sims.knowledge import IndexField
+from sims.sky_cube import read_cube
+from sims.sky_invented import (
+    INVENTED_FREQUENCY_MHZ,
+    gaussian_field,
+    invented_index_map,
+    invented_sky_map,
+    power_law_field,
+)
+from sims.sky_joined import JoinedSky
+from sims.sky_layers import Layers, gas_shape
+from sims.sky_map_checks import Frame
+from sims.sky_maps import DiffuseMap, read_healpix_map, read_image_map, read_index_map
+from sims.sky_power_law import DiffuseSky
+from sims.sky_survey import ManyMaps, read_survey_maps
 from sims.streams import stream
 
-__all__ = ["DiffuseSky", "diffuse_map_from", "gaussian_field", "sky_from"]
+__all__ = [
+    "AnySky",
+    "DiffuseSky",
+    "JoinedSky",
+    "SkySettings",
+    "diffuse_map_from",
+    "gaussian_field",
+    "index_error",
+    "moved_sky",
+    "sky_from",
+]
 
-SkySettings = InventedSky | HealpixSky | ImageSky
+OneMapSettings = InventedSky | HealpixSky | ImageSky
+ManyMapsSettings = JoinedSettings | CubeSky
+SkySettings = OneMapSettings | ManyMapsSettings
+AnySky = DiffuseSky | JoinedSky
 
-
-@dataclass(frozen=True, eq=False)
-class DiffuseSky:
-    """Brightness of every direction at every frequency.
-
-    T(f) = (T_map - T_cmb(f0)) (f / f0)^-(beta + gamma ln(f / f0)) + T_cmb(f), with
-    T_map = scale (map - zero level) + noise and the CMB in Rayleigh-Jeans brightness.
-
-    Attributes
-    ----------
-    diffuse_map : DiffuseMap
-        The map as read.
-    frequency_mhz : float
-        f0, frequency of the map, MHz.
-    index : float or ndarray[pixel]
-        beta, dimensionless; T ~ f^-beta.
-    curvature : float
-        gamma, dimensionless.
-    zero_level_k : float
-        Error of the map's zero level, K, subtracted before scaling.
-    scale : float
-        Factor on the map.
-    valid_from_mhz, valid_to_mhz : float
-        Range of frequencies the spectrum is held to be good for, MHz.
-    noise_k : float or ndarray[pixel]
-        Added to the corrected map, K.
-
-    Raises
-    ------
-    InputError
-        With every problem found: shapes, a range that does not rise, and pixels at or below
-        the CMB at f0, whose foreground would be negative.
-    """
-
-    diffuse_map: DiffuseMap
-    frequency_mhz: float
-    index: float | NDArray[np.float64]
-    curvature: float
-    zero_level_k: float
-    scale: float
-    valid_from_mhz: float
-    valid_to_mhz: float
-    noise_k: float | NDArray[np.float64] = 0.0
-    directions: NDArray[np.float64] = field(init=False, repr=False)
-
-    def __post_init__(self) -> None:
-        pixels = self.diffuse_map.temperature_k.size
-        problems = [
-            f"sky: {name} has shape {np.shape(value)}; allowed: one number, or {pixels} pixels"
-            for name, value in (("index", self.index), ("noise", self.noise_k))
-            if np.shape(value) not in ((), self.diffuse_map.temperature_k.shape)
-        ]
-        if not np.all(np.isfinite(self.index)):
-            problems.append("sky: index is not finite everywhere; allowed: finite numbers")
-        if not 0.0 < self.valid_from_mhz < self.valid_to_mhz:
-            problems.append(
-                f"sky: valid_from {self.valid_from_mhz:g} MHz, valid_to {self.valid_to_mhz:g} MHz; "
-                "allowed: positive and rising"
-            )
-        if not self.frequency_mhz > 0.0:
-            problems.append(f"sky: frequency {self.frequency_mhz:g} MHz of the map; allowed: positive")
-        raise_if_any(problems)
-        excess = self._foreground_k()
-        dark = ~(excess > 0.0)
-        if dark.any():
-            raise InputError(
-                f"sky: map {self.diffuse_map.source}: {int(dark.sum())} of {dark.size} pixels are at or below the CMB "
-                f"at {self.frequency_mhz:g} MHz after zero level ({self.zero_level_k:g} K), scale ({self.scale:g}) and "
-                f"noise, lowest {np.min(self.corrected_map_k()):.4g} K, first pixels "
-                f"{', '.join(str(pixel) for pixel in np.flatnonzero(dark)[:5])}; allowed: brighter everywhere"
-            )
-        object.__setattr__(self, "directions", pixel_directions(self.nside, self.diffuse_map.frame))
-
-    @property
-    def nside(self) -> int:
-        """HEALPix resolution."""
-        return self.diffuse_map.nside
-
-    def corrected_map_k(self) -> NDArray[np.float64]:
-        """Map at its own frequency after zero level, scale and noise, ndarray[pixel], K, CMB included."""
-        return np.asarray(self.scale * (self.diffuse_map.temperature_k - self.zero_level_k) + self.noise_k)
-
-    def brightness_k(self, frequency_mhz: ArrayLike) -> NDArray[np.float64]:
-        """Brightness of every pixel.
-
-        Parameters
-        ----------
-        frequency_mhz : array_like[frequency]
-            Frequencies, MHz; within `valid_from_mhz` to `valid_to_mhz`.
-
-        Returns
-        -------
-        ndarray[pixel, frequency]
-            Rayleigh-Jeans brightness temperature, K, CMB included; C-contiguous.
-
-        Raises
-        ------
-        InputError
-            If a frequency lies outside the valid range: a spectrum is not extrapolated silently.
-        """
-        frequency = self._checked(frequency_mhz)
-        brightness = self._foreground_k()[:, np.newaxis] * self._spectra(np.log(frequency / self.frequency_mhz))
-        brightness += rayleigh_jeans_k(CMB_TEMPERATURE_K, frequency)
-        return brightness
-
-    def mean_k(self, frequency_mhz: ArrayLike) -> NDArray[np.float64]:
-        """Mean over the sphere at each frequency, ndarray[frequency], K; checks as `brightness_k`."""
-        return np.asarray(self.brightness_k(frequency_mhz).mean(axis=0))
-
-    def with_index_field(self, change: ArrayLike) -> DiffuseSky:
-        """Copy with `change`, a number or ndarray[pixel], added to the spectral index."""
-        return replace(self, index=self.index + np.asarray(change, dtype=np.float64))
-
-    def with_map_noise(self, noise_k: ArrayLike) -> DiffuseSky:
-        """Copy with `noise_k`, K, a number or ndarray[pixel], added to the corrected map at its own frequency.
-
-        Raises
-        ------
-        InputError
-            If a pixel would fall to the CMB or below.
-        """
-        return replace(self, noise_k=self.noise_k + np.asarray(noise_k, dtype=np.float64))
-
-    def _foreground_k(self) -> NDArray[np.float64]:
-        return self.corrected_map_k() - rayleigh_jeans_k(CMB_TEMPERATURE_K, self.frequency_mhz)
-
-    def _spectra(self, log_ratio: NDArray[np.float64]) -> NDArray[np.float64]:
-        """(f / f0)^-(beta + gamma ln(f / f0)), ndarray[pixel or 1, frequency]."""
-        exponent = np.multiply.outer(-np.atleast_1d(self.index), log_ratio)
-        exponent -= self.curvature * log_ratio**2
-        return np.asarray(np.exp(exponent, out=exponent))
-
-    def _checked(self, frequency_mhz: ArrayLike) -> NDArray[np.float64]:
-        frequency = np.atleast_1d(np.asarray(frequency_mhz, dtype=np.float64))
-        if frequency.ndim != 1:
-            raise InputError(f"sky: frequencies have shape {frequency.shape}; allowed: one dimension")
-        outside = ~((frequency >= self.valid_from_mhz) & (frequency <= self.valid_to_mhz))
-        if outside.any():
-            raise InputError(
-                f"sky: {int(outside.sum())} frequencies, {np.min(frequency):g} to {np.max(frequency):g} MHz, reach "
-                f"outside sky.valid_from to sky.valid_to; allowed: {self.valid_from_mhz:g} to {self.valid_to_mhz:g} MHz"
-            )
-        return frequency
+# Numbers that change a sky but not what is read for it.
+_FREE_OF_ALL = {"background", "valid_from_mhz", "valid_to_mhz"}
+_FREE_OF_ONE_MAP = {"index", "curvature", "zero_level_k", "scale"}
+_FREE_OF_MANY = {"frequency_mhz", "index_change", "join", "order", "zero_levels_k", "scales", "scale"}
+_FREE_OF_EACH = {"zero_level_k", "scale"}
+_FREE_OF_GAS = {
+    "electron_temperature_k", "emission_measure_pc_cm6", "lowest_latitude_deg", "scale", "geometry", "in_maps",
+}  # fmt: skip
 
 
-def sky_from(settings: SkySettings) -> DiffuseSky:
+def sky_from(settings: SkySettings) -> AnySky:
     """Build the sky that ``[sky]`` describes.
 
     Parameters
     ----------
-    settings : InventedSky or HealpixSky or ImageSky
+    settings : InventedSky or HealpixSky or ImageSky or JoinedSky or CubeSky
         The table. Where there is an index map, it gives how the index varies and
         ``sky.index`` its mean over the sphere, so that an error of the mean is one number.
         The invented sky brings such a map with it.
 
     Returns
     -------
-    DiffuseSky
+    DiffuseSky or JoinedSky
+        From one map, or from several.
 
     Raises
     ------
     InputError
-        With every problem of the map, and of the index map, found.
+        With every problem of the maps, of the index map, and of the map of the gas, found.
     """
     problems: list[str] = []
+    read: DiffuseMap | ManyMaps | None = None
+    variation: float | NDArray[np.float64] = 0.0
+    shape: NDArray[np.float64] | None = None
     try:
-        diffuse_map: DiffuseMap | None = diffuse_map_from(settings)
+        read = _maps_from(settings)
     except InputError as error:
-        diffuse_map, problems = None, [*problems, *error.problems]
+        problems += error.problems
     try:
         variation = _index_variation(settings)
     except InputError as error:
-        problems = [*problems, *error.problems]
+        problems += error.problems
+    try:
+        shape = gas_shape(settings.free_free, settings.nside, frame_of(settings))
+    except InputError as error:
+        problems += error.problems
     raise_if_any(problems)
-    assert diffuse_map is not None
+    layers = Layers(settings.free_free, settings.background, shape)
+    if isinstance(settings, JoinedSettings | CubeSky):
+        assert isinstance(read, ManyMaps)
+        zero_levels_k, scales = _corrections(settings)
+        return JoinedSky(
+            maps=read,
+            frequency_mhz=settings.frequency_mhz,
+            zero_levels_k=zero_levels_k,
+            scales=scales,
+            join=settings.join,
+            order=settings.order,
+            valid_from_mhz=settings.valid_from_mhz,
+            valid_to_mhz=settings.valid_to_mhz,
+            index_change=settings.index_change,
+            layers=layers,
+        )
+    assert isinstance(read, DiffuseMap)
     return DiffuseSky(
-        diffuse_map=diffuse_map,
+        diffuse_map=read,
         frequency_mhz=settings.frequency_mhz,
         index=settings.index + variation,
         curvature=settings.curvature,
@@ -207,26 +122,44 @@ def sky_from(settings: SkySettings) -> DiffuseSky:
         scale=settings.scale,
         valid_from_mhz=settings.valid_from_mhz,
         valid_to_mhz=settings.valid_to_mhz,
+        layers=layers,
     )
 
 
-def moved_sky(sky: DiffuseSky, before: SkySettings, after: SkySettings) -> DiffuseSky:
-    """The sky of `after`, from that of `before`: without reading the map again where only numbers differ.
+def moved_sky(sky: AnySky, before: SkySettings, after: SkySettings) -> AnySky:
+    """The sky of `after`, from that of `before`: without reading a file again where only numbers differ.
 
     Parameters
     ----------
-    sky : DiffuseSky
+    sky : DiffuseSky or JoinedSky
         From `sky_from(before)`, without drawn fields.
-    before, after : InventedSky or HealpixSky or ImageSky
+    before, after : InventedSky or HealpixSky or ImageSky or JoinedSky or CubeSky
         Two settings of the table.
 
     Returns
     -------
-    DiffuseSky
+    DiffuseSky or JoinedSky
     """
-    numbers = ("index", "curvature", "zero_level_k", "scale", "valid_from_mhz", "valid_to_mhz")
-    if before.model_copy(update={name: getattr(after, name) for name in numbers}) != after:
+    if _as_read(before) != _as_read(after):
         return sky_from(after)
+    layers = Layers(after.free_free, after.background, sky.layers.shape)
+    if isinstance(after, JoinedSettings | CubeSky):
+        assert isinstance(sky, JoinedSky)
+        zero_levels_k, scales = _corrections(after)
+        return replace(
+            sky,
+            frequency_mhz=after.frequency_mhz,
+            zero_levels_k=zero_levels_k,
+            scales=scales,
+            join=after.join,
+            order=after.order,
+            index_change=after.index_change,
+            valid_from_mhz=after.valid_from_mhz,
+            valid_to_mhz=after.valid_to_mhz,
+            layers=layers,
+        )
+    assert isinstance(sky, DiffuseSky)
+    assert not isinstance(before, JoinedSettings | CubeSky)
     return replace(
         sky,
         index=sky.index + (after.index - before.index),
@@ -235,10 +168,42 @@ def moved_sky(sky: DiffuseSky, before: SkySettings, after: SkySettings) -> Diffu
         scale=after.scale,
         valid_from_mhz=after.valid_from_mhz,
         valid_to_mhz=after.valid_to_mhz,
+        layers=layers,
     )
 
 
-def diffuse_map_from(settings: SkySettings) -> DiffuseMap:
+def index_error(known: IndexField, nside: int, rng: np.random.Generator) -> NDArray[np.float64]:
+    """Draw the error of the spectral index over the sky that ``[knowledge.index_field]`` describes.
+
+    Parameters
+    ----------
+    known : IndexField
+        Its standard deviation, its correlation length or angular power law, and the error of its mean.
+    nside : int
+        HEALPix resolution of the sky.
+    rng : numpy.random.Generator
+        Gives the field, then the mean.
+
+    Returns
+    -------
+    ndarray[pixel]
+        To be added to the index, dimensionless.
+    """
+    if known.correlation_length_deg is not None:
+        drawn = gaussian_field(nside, known.sd, known.correlation_length_deg, rng)
+    else:
+        assert known.angular_index is not None
+        assert known.angular_offset is not None
+        drawn = power_law_field(nside, known.sd, known.angular_index, known.angular_offset, rng)
+    return np.asarray(drawn + known.mean_sd * rng.standard_normal())
+
+
+def frame_of(settings: SkySettings) -> Frame:
+    """Frame of the sky's pixels."""
+    return "galactic" if isinstance(settings, InventedSky) else settings.frame
+
+
+def diffuse_map_from(settings: OneMapSettings) -> DiffuseMap:
     """Read or invent the map that ``[sky]`` names.
 
     Raises
@@ -272,13 +237,40 @@ def diffuse_map_from(settings: SkySettings) -> DiffuseMap:
     )
 
 
+def _maps_from(settings: SkySettings) -> DiffuseMap | ManyMaps:
+    if isinstance(settings, JoinedSettings):
+        return read_survey_maps(settings)
+    return read_cube(settings) if isinstance(settings, CubeSky) else diffuse_map_from(settings)
+
+
+def _corrections(settings: ManyMapsSettings) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Zero level, K, and scale of each map."""
+    if isinstance(settings, JoinedSettings):
+        return np.array([one.zero_level_k for one in settings.maps]), np.array([one.scale for one in settings.maps])
+    count = len(settings.frequencies_mhz)
+    zero_levels = np.array(settings.zero_levels_k) if settings.zero_levels_k else np.zeros(count)
+    scales = np.array(settings.scales) if settings.scales else np.ones(count)
+    return zero_levels, settings.scale * scales
+
+
 def _index_variation(settings: SkySettings) -> float | NDArray[np.float64]:
     """Departure of the spectral index from its mean over the sphere, at each pixel."""
+    if isinstance(settings, JoinedSettings | CubeSky):
+        return 0.0
     if settings.index_map is not None:
-        frame = "galactic" if settings.kind == "invented" else settings.frame
-        index = read_index_map(settings.index_map, nside=settings.nside, frame=frame)
+        index = read_index_map(settings.index_map, nside=settings.nside, frame=frame_of(settings))
     elif settings.kind == "invented":
         index = invented_index_map(settings.nside, stream(settings.map_seed, "invented-index"))
     else:
         return 0.0
     return np.asarray(index - index.mean())
+
+
+def _as_read(settings: SkySettings) -> dict[str, Any]:
+    """What of the settings decides what is read."""
+    many = isinstance(settings, JoinedSettings | CubeSky)
+    table = settings.model_dump(exclude=_FREE_OF_ALL | (_FREE_OF_MANY if many else _FREE_OF_ONE_MAP))
+    for part, free in [(table["free_free"], _FREE_OF_GAS), *((one, _FREE_OF_EACH) for one in table.get("maps", ()))]:
+        for name in free & set(part or ()):
+            part.pop(name)
+    return table

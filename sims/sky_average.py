@@ -9,18 +9,23 @@ count of nodes is raised to a cap, and beyond it every channel is integrated on 
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
-from sims.beam import Beam
+from sims.beam import Beam, beam_tables
+from sims.beam_grid import GridBeam
 from sims.config import Engine, Surface
 from sims.constants import rayleigh_jeans_k
 from sims.frequency import ChannelGrid, chebyshev_nodes_mhz, expansion_matrix, mean_expansion_matrix
-from sims.moon import Mirror, mirror
-from sims.pixel_sum import Pointing, beam_tables, pixel_sums
+from sims.horizon import Horizon
+from sims.limb import taper_width_rad
+from sims.mirror import Mirror, mirror
+from sims.moon import lowest_cosine, reflectivity_table, surface_brightness_k
+from sims.pixel_sum import Ground, Pattern, Pointing, pixel_sums
+from sims.pixels import pixel_grid
 
 FloatArray = NDArray[np.float64]
 BATCH_FREQUENCIES = 32
@@ -35,12 +40,8 @@ class Sky(Protocol):
     def nside(self) -> int:
         """HEALPix resolution."""
 
-    @property
-    def directions(self) -> FloatArray:
-        """Unit vectors ndarray[pixel, 3] of pixel centres, ICRS."""
-
     def brightness_k(self, frequency_mhz: FloatArray) -> FloatArray:
-        """Brightness ndarray[pixel, frequency], K, CMB included."""
+        """Brightness ndarray[pixel, frequency], K, CMB included; ring order, ICRS."""
 
 
 @dataclass(frozen=True)
@@ -50,24 +51,35 @@ class Scene:
     Attributes
     ----------
     sky : Sky
-    beam : Beam
+    beam : Beam or GridBeam
     pointing : Pointing
         Axes of the beam and the body below, one row a sample.
     surface : Surface
         Temperature, permittivity, and whether the sky's image in it counts.
     sphere : bool
-        True where the body below is the Moon seen from orbit, False for level ground.
+        True where the body below is the Moon seen from orbit, False for the ground under a site.
+    horizon : Horizon or None
+        Elevation of the horizon round a site; None where it is level, at the limb angle.
     """
 
     sky: Sky
-    beam: Beam
+    beam: Beam | GridBeam
     pointing: Pointing
     surface: Surface
     sphere: bool
+    horizon: Horizon | None = None
 
     def part(self, rows: slice | NDArray[np.int64]) -> Scene:
         """The same for some of the samples."""
-        return Scene(self.sky, self.beam, self.pointing.part(rows), self.surface, self.sphere)
+        return replace(self, pointing=self.pointing.part(rows))
+
+    @property
+    def taper_rad(self) -> float:
+        """Half the width of the taper that stands for the limb, rad."""
+        limb = self.pointing.limb_angle_rad
+        if self.horizon is not None:
+            limb = np.pi / 2 + np.array([self.horizon.lowest_rad, self.horizon.highest_rad])
+        return taper_width_rad(pixel_grid(self.sky.nside).side_rad, limb)
 
 
 @dataclass(frozen=True)
@@ -109,7 +121,7 @@ class SkyAverage:
     reached: Reached
 
 
-def scene_axes(beam: Beam, attitude: FloatArray) -> FloatArray:
+def scene_axes(beam: Beam | GridBeam, attitude: FloatArray) -> FloatArray:
     """Profile axes in ICRS: ndarray[time, factor, 3] from rotation matrices ndarray[time, 3, 3]."""
     return np.asarray(np.einsum("tij,jk,fk->tfi", attitude, beam.mounting, beam.axes))
 
@@ -180,7 +192,8 @@ def evaluate(scene: Scene, frequency_mhz: FloatArray, advance: Callable[[int], N
     signal_response : ndarray[time, frequency]
         eta times the part of the beam that meets the sky, straight or mirrored.
     """
-    image = _mirror_below(scene)
+    taper_rad = scene.taper_rad
+    image = _mirror_below(scene, taper_rad)
     batches = np.array_split(frequency_mhz, int(np.ceil(len(frequency_mhz) / BATCH_FREQUENCIES)))
     done = [0]
 
@@ -189,41 +202,53 @@ def evaluate(scene: Scene, frequency_mhz: FloatArray, advance: Callable[[int], N
         whole, done[0] = divmod(done[0], len(batches))
         advance(whole)
 
-    parts = [_evaluate_batch(scene, batch, image, advance_part) for batch in batches]
+    parts = [_evaluate_batch(scene, batch, image, taper_rad, advance_part) for batch in batches]
     return np.concatenate([part[0] for part in parts], axis=1), np.concatenate([part[1] for part in parts], axis=1)
 
 
 def _evaluate_batch(
-    scene: Scene, frequency_mhz: FloatArray, image: Mirror | None, advance: Callable[[int], None]
+    scene: Scene, frequency_mhz: FloatArray, image: Mirror | None, taper_rad: float, advance: Callable[[int], None]
 ) -> tuple[FloatArray, FloatArray]:
-    beam, surface = scene.beam, scene.surface
-    sky_k, response = pixel_sums(
-        scene.sky.directions,
+    beam, surface, pixels = scene.beam, scene.surface, pixel_grid(scene.sky.nside)
+    ground = Ground(
+        mirror=image,
+        reflectivity=reflectivity_table(surface, frequency_mhz),
+        lowest_cosine=lowest_cosine(surface),
+        horizon=scene.horizon,
+        warmer_poles=surface.polar_temperature_k is not None,
+        sphere=scene.sphere,
+    )
+    sums = pixel_sums(
+        pixels.directions,
+        pixels.weights,
         np.ascontiguousarray(scene.sky.brightness_k(frequency_mhz)),
-        beam_tables(beam, frequency_mhz),
+        _pattern(beam, frequency_mhz),
         scene.pointing,
-        image,
-        pixel_angle_rad(scene.sky.nside),
+        ground,
+        taper_rad,
         advance,
     )
-    surface_k = rayleigh_jeans_k(surface.temperature_k, frequency_mhz)
+    equator_k, change_k = surface_brightness_k(surface, frequency_mhz)
     structure_k = rayleigh_jeans_k(beam.structure_temperature_k, frequency_mhz)
-    reaching = sky_k + surface_k * (1.0 - response)
-    return beam.efficiency * reaching + (1.0 - beam.efficiency) * structure_k, beam.efficiency * response
+    reaching = sums.sky_k + equator_k * (1.0 - sums.response) + change_k * sums.polar
+    efficiency, lost = beam.efficiency_at(frequency_mhz), beam.ground_share_at(frequency_mhz)
+    received = (1.0 - lost) * reaching + lost * equator_k
+    return efficiency * received + (1.0 - efficiency) * structure_k, efficiency * (1.0 - lost) * sums.response
 
 
-def pixel_angle_rad(nside: int) -> float:
-    """Side of a HEALPix pixel, rad: the square root of its solid angle."""
-    return float(np.sqrt(4.0 * np.pi / (12 * nside**2)))
+def _pattern(beam: Beam | GridBeam, frequency_mhz: FloatArray) -> Pattern:
+    """The beam in the form the kernel reads."""
+    count = len(frequency_mhz)
+    if isinstance(beam, GridBeam):
+        return Pattern(np.zeros((0, 1, 4, count)), beam.node_table(frequency_mhz), beam.layout)
+    return Pattern(beam_tables(beam, frequency_mhz), np.zeros((4, 4, count)), np.zeros(5))
 
 
-def _mirror_below(scene: Scene) -> Mirror | None:
+def _mirror_below(scene: Scene, taper_rad: float) -> Mirror | None:
     if not scene.surface.reflection:
         return None
     limb = scene.pointing.limb_angle_rad
-    if np.ptp(limb) > 1e-9:
-        raise NotImplementedError("the mirror image is tabulated for one distance from the body below")
-    return mirror(float(limb[0]), scene.surface.permittivity, sphere=scene.sphere)
+    return mirror(float(limb.min()), float(limb.max()), taper_rad, sphere=scene.sphere)
 
 
 def _spread(count: int, wanted: int) -> NDArray[np.int64]:

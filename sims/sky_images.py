@@ -112,8 +112,10 @@ def read_image(path: Path, *, frame: Frame, unit: str, missing: Missing) -> SkyI
     return SkyImage(whole, longitude[: whole.shape[1]], latitude, int(bad.sum()))
 
 
-def average_onto_healpix(image: SkyImage, nside: int) -> NDArray[np.float64]:
-    """Average an image over the area of each HEALPix pixel of its own frame.
+def average_onto_healpix(
+    image: SkyImage, nside: int, rotation: NDArray[np.float64] | None = None
+) -> NDArray[np.float64]:
+    """Average an image over the area of each HEALPix pixel, of its own frame or of a turned one.
 
     Each pixel is cut into equal-area HEALPix children, at least four to a cell of the image
     each way; a child takes the value of the cell its centre lies in, and a pixel the mean of
@@ -126,6 +128,8 @@ def average_onto_healpix(image: SkyImage, nside: int) -> NDArray[np.float64]:
         The whole sphere.
     nside : int
         HEALPix resolution, a power of two.
+    rotation : ndarray[3, 3], optional
+        Carries row vectors of the pixels' frame into the image's, as `sims.sky_grid.frame_rotation` gives it.
 
     Returns
     -------
@@ -143,6 +147,9 @@ def average_onto_healpix(image: SkyImage, nside: int) -> NDArray[np.float64]:
         stop = min(start + block, nested.size)
         children = np.arange(start * split**2, stop * split**2)
         longitude, latitude = healpy.pix2ang(nside * split, children, nest=True, lonlat=True)
+        if rotation is not None:
+            turned = healpy.ang2vec(longitude, latitude, lonlat=True) @ rotation
+            longitude, latitude = healpy.vec2ang(turned, lonlat=True)
         column = np.rint((longitude - image.longitude_deg[0]) / step_longitude).astype(np.int64) % columns
         row = np.clip(np.rint((latitude - image.latitude_deg[0]) / step_latitude).astype(np.int64), 0, rows - 1)
         nested[start:stop] = image.temperature_k[row, column].reshape(-1, split**2).mean(axis=1)

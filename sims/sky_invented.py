@@ -106,6 +106,42 @@ def gaussian_field_spectrum(lmax: int, correlation_length_deg: float) -> NDArray
     return spectrum / variance
 
 
+def power_law_field(
+    nside: int, sd: float, angular_index: float, angular_offset: float, rng: np.random.Generator
+) -> NDArray[np.float64]:
+    """Draw an isotropic Gaussian field of zero mean with C_l ~ (l + l0)^-index.
+
+    Parameters
+    ----------
+    nside : int
+        HEALPix resolution.
+    sd : float
+        Standard deviation of each pixel over the ensemble, in the unit of what is drawn; all of
+        it in multipoles 1 to 3 nside - 1, whatever the resolution.
+    angular_index : float
+        Dimensionless.
+    angular_offset : float
+        l0, dimensionless.
+    rng : numpy.random.Generator
+        Source of the (3 nside)^2 normal numbers.
+
+    Returns
+    -------
+    ndarray[pixel]
+        The field at the pixel centres, RING order; no pixel window is applied. Its mean over the
+        sphere (l = 0) is none of it.
+    """
+    return sd * synthesised(power_law_spectrum(3 * nside - 1, angular_index, angular_offset), nside, rng)
+
+
+def power_law_spectrum(lmax: int, angular_index: float, angular_offset: float) -> NDArray[np.float64]:
+    """C_l ~ (l + l0)^-index, ndarray[multipole], from l = 0, where it is zero, to `lmax`; of unit variance."""
+    multipole = np.arange(lmax + 1)
+    spectrum = np.zeros(lmax + 1)
+    spectrum[1:] = (multipole[1:] + angular_offset) ** -angular_index
+    return np.asarray(spectrum * 4.0 * np.pi / np.sum((2 * multipole + 1) * spectrum))
+
+
 def synthesised(spectrum: NDArray[np.float64], nside: int, rng: np.random.Generator) -> NDArray[np.float64]:
     """Draw a Gaussian field of a given angular power spectrum.
 

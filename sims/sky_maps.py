@@ -8,34 +8,35 @@ What the user declares is held against the header, and every disagreement is rep
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+from functools import lru_cache
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any
 
+import astropy.units as u
 import healpy
 import numpy as np
 from astropy.coordinates import SkyCoord
-from astropy.io import fits
 from numpy.typing import NDArray
 
 from sims.errors import InputError, raise_if_any
-from sims.sky_images import average_onto_healpix, read_image
-from sims.sky_map_checks import Frame, Missing, check_missing, fill_missing, load_hdu, sha256_of, unit_in_kelvin
+from sims.sky_healpix import (
+    COORDSYS_FRAMES,
+    Ordering,
+    check_coordsys,
+    check_nside,
+    coarser,
+    healpix_column,
+    missing_pixels,
+    order_of,
+    own_nside_of,
+    ring_order,
+    whole_ring,
+)
+from sims.sky_images import SkyImage, average_onto_healpix, read_image
+from sims.sky_map_checks import Frame, Missing, check_missing, sha256_of, unit_in_kelvin
 
-Ordering = Literal["header", "ring", "nested"]
-
-COORDSYS_FRAMES: dict[str, tuple[Frame, ...]] = {
-    "G": ("galactic",),
-    "GALACTIC": ("galactic",),
-    "C": ("icrs", "fk5", "fk4"),
-    "Q": ("icrs", "fk5", "fk4"),
-    "EQUATORIAL": ("icrs", "fk5", "fk4"),
-    "CELESTIAL": ("icrs", "fk5", "fk4"),
-    "ICRS": ("icrs",),
-    "FK5": ("fk5",),
-    "FK4": ("fk4",),
-}
-ORDERINGS = {"RING": "ring", "NEST": "nested", "NESTED": "nested"}
 INDEX_RANGE = (1.0, 4.0)
 
 
@@ -67,10 +68,13 @@ class DiffuseMap:
     sha256: str
 
 
+@lru_cache(maxsize=2)
 def pixel_directions(nside: int, frame: Frame) -> NDArray[np.float64]:
-    """Pixel centres of a RING map in `frame`, as ICRS unit vectors, ndarray[pixel, 3]."""
+    """Pixel centres of a RING map in `frame`, as ICRS unit vectors, ndarray[pixel, 3]; shared and read-only."""
     centres = np.column_stack(healpy.pix2vec(nside, np.arange(healpy.nside2npix(nside))))
-    return turn_directions(centres, frame, "icrs")
+    directions = turn_directions(centres, frame, "icrs")
+    directions.flags.writeable = False
+    return directions
 
 
 def turn_directions(vectors: NDArray[np.float64], frame: Frame, to_frame: Frame) -> NDArray[np.float64]:
@@ -114,22 +118,27 @@ def read_healpix_map(
     InputError
         With every problem found.
     """
-    values, header, where = _healpix_column(path, field)
+    read = read_healpix_ring(path, field=field, ordering=ordering, frame=frame, unit=unit, missing=missing, nside=nside)
+    return replace(read, temperature_k=coarser(read.temperature_k, nside), nside=nside)
+
+
+def read_healpix_ring(
+    path: Path, *, field: int, ordering: Ordering, frame: Frame, unit: str, missing: Missing, nside: int
+) -> DiffuseMap:
+    """`read_healpix_map` at the file's own resolution, which must not be coarser than `nside`."""
+    values, header, where = healpix_column(path, field)
     problems: list[str] = []
     kelvin = unit_in_kelvin(unit, header.get(f"TUNIT{field + 1}"), f"{where}: header TUNIT{field + 1}", problems)
-    order = _order(header, ordering, where, problems)
-    _check_coordsys(header, frame, where, problems)
-    own_nside = _own_nside(values.size, header, where, problems)
-    bad = _missing_pixels(values, header)
+    order = order_of(header, ordering, where, problems)
+    check_coordsys(header, frame, where, problems)
+    own_nside = own_nside_of(values.size, header, where, problems)
+    bad = missing_pixels(values, header)
     check_missing(bad, missing, f"{where}, column {field}", "pixel", problems)
-    _check_nside(nside, own_nside, where, problems)
+    check_nside(nside, own_nside, where, problems)
     raise_if_any(problems)
-    ring = values if order == "ring" else healpy.reorder(values, n2r=True)
-    bad_ring = bad if order == "ring" else healpy.reorder(bad.astype(float), n2r=True) > 0.5
-    whole = fill_missing(ring, bad_ring, lambda pixels: healpy.get_all_neighbours(own_nside, pixels))
     return DiffuseMap(
-        temperature_k=_coarser(whole * kelvin, nside),
-        nside=nside,
+        temperature_k=whole_ring(values, bad, order, own_nside) * kelvin,
+        nside=own_nside,
         frame=frame,
         filled_pixels=int(bad.sum()),
         source=Path(path).name,
@@ -156,16 +165,7 @@ def read_image_map(path: Path, *, frame: Frame, unit: str, missing: Missing, nsi
     InputError
         With every problem found.
     """
-    problems: list[str] = []
-    _check_nside(nside, None, str(path), problems)
-    try:
-        image = read_image(path, frame=frame, unit=unit, missing=missing)
-    except InputError as error:
-        raise InputError([*problems, *error.problems]) from None
-    finest = 2 ** int(math.log2(math.degrees(healpy.nside2resol(1)) / image.step_deg))
-    if nside > finest:
-        problems.append(f"{path}: nside {nside} is finer than {image.step_deg:.4g} deg cells; allowed: up to {finest}")
-    raise_if_any(problems)
+    image = read_image_for(path, frame=frame, unit=unit, missing=missing, nside=nside)
     return DiffuseMap(
         temperature_k=average_onto_healpix(image, nside),
         nside=nside,
@@ -174,6 +174,26 @@ def read_image_map(path: Path, *, frame: Frame, unit: str, missing: Missing, nsi
         source=Path(path).name,
         sha256=sha256_of(path),
     )
+
+
+def read_image_for(path: Path, *, frame: Frame, unit: str, missing: Missing, nside: int) -> SkyImage:
+    """The image itself, whose cells must not be coarser than the pixels of `nside`."""
+    problems: list[str] = []
+    check_nside(nside, None, str(path), problems)
+    try:
+        image = read_image(path, frame=frame, unit=unit, missing=missing)
+    except InputError as error:
+        raise InputError([*problems, *error.problems]) from None
+    finest = finest_nside(image)
+    if nside > finest:
+        problems.append(f"{path}: nside {nside} is finer than {image.step_deg:.4g} deg cells; allowed: up to {finest}")
+    raise_if_any(problems)
+    return image
+
+
+def finest_nside(image: SkyImage) -> int:
+    """Finest resolution whose pixels are no smaller than the cells of an image."""
+    return int(2 ** int(math.log2(math.degrees(healpy.nside2resol(1)) / image.step_deg)))
 
 
 def read_index_map(path: Path, *, nside: int, frame: Frame) -> NDArray[np.float64]:
@@ -197,96 +217,66 @@ def read_index_map(path: Path, *, nside: int, frame: Frame) -> NDArray[np.float6
     InputError
         With every problem found; missing values and values outside 1 to 4 are refused.
     """
-    values, header, where = _healpix_column(path, 0)
+    low, high = INDEX_RANGE
+
+    def judge(values: NDArray[np.float64], header: Any, where: str, problems: list[str]) -> None:
+        outside = int(np.sum((values < low) | (values > high)))
+        if outside:
+            problems.append(
+                f"{where}: {outside} spectral indices lie outside {low:g} to {high:g}; "
+                "T ~ f^-index, so the sign is plus"
+            )
+
+    return _auxiliary_map(path, nside, frame, judge)
+
+
+def read_emission_measure_map(path: Path, *, nside: int, frame: Frame) -> NDArray[np.float64]:
+    """Read a HEALPix FITS map of the emission measure, pc cm^-6, onto a map's pixels, as `read_index_map` does.
+
+    Raises
+    ------
+    InputError
+        With every problem found; missing and negative values and another unit in TUNIT1 are refused.
+    """
+
+    def judge(values: NDArray[np.float64], header: Any, where: str, problems: list[str]) -> None:
+        negative = int(np.sum(values < 0.0))
+        if negative:
+            problems.append(f"{where}: {negative} emission measures are negative; allowed: zero and above")
+        text = str(header.get("TUNIT1", "")).strip()
+        if text and not _is_emission_measure(text):
+            problems.append(f"{where}: header TUNIT1 is {text!r}; allowed: 'pc cm-6', or none")
+
+    return _auxiliary_map(path, nside, frame, judge)
+
+
+def _is_emission_measure(text: str) -> bool:
+    try:
+        return bool(u.Unit(text) == u.pc / u.cm**6)
+    except ValueError:
+        return False
+
+
+def _auxiliary_map(
+    path: Path, nside: int, frame: Frame, judge: Callable[[NDArray[np.float64], Any, str, list[str]], None]
+) -> NDArray[np.float64]:
+    """First column of a file whose header says order and frame, brought onto the pixels of another map."""
+    values, header, where = healpix_column(path, 0)
     problems: list[str] = []
-    order = _order(header, "header", where, problems)
+    order = order_of(header, "header", where, problems)
     coordsys = str(header.get("COORDSYS", "")).strip().upper()
     if coordsys not in COORDSYS_FRAMES:
         problems.append(f"{where}: header COORDSYS is {coordsys!r}; allowed: {', '.join(COORDSYS_FRAMES)}")
-    own_nside = _own_nside(values.size, header, where, problems)
-    bad = _missing_pixels(values, header)
+    own_nside = own_nside_of(values.size, header, where, problems)
+    bad = missing_pixels(values, header)
     check_missing(bad, "refuse", f"{where}, column 0", "pixel", problems)
-    low, high = INDEX_RANGE
-    outside = int(np.sum((values[~bad] < low) | (values[~bad] > high)))
-    if outside:
-        problems.append(
-            f"{where}: {outside} spectral indices lie outside {low:g} to {high:g}; T ~ f^-index, so the sign is plus"
-        )
+    judge(values[~bad], header, where, problems)
     raise_if_any(problems)
-    ring = values if order == "ring" else healpy.reorder(values, n2r=True)
+    ring = ring_order(values, order)
     own_frame = COORDSYS_FRAMES[coordsys][0]
     if own_frame == frame and own_nside >= nside:
-        return _coarser(ring, nside)
+        return coarser(ring, nside)
     if own_nside > nside:
-        ring = _coarser(ring, nside)
+        ring = coarser(ring, nside)
     theta, phi = healpy.vec2ang(turn_directions(pixel_directions(nside, frame), "icrs", own_frame))
     return np.asarray(healpy.get_interp_val(ring, theta, phi), dtype=np.float64)
-
-
-def _healpix_column(path: Path, field: int) -> tuple[NDArray[np.float64], Any, str]:
-    def is_healpix(hdu: Any) -> bool:
-        return isinstance(hdu, fits.BinTableHDU) and str(hdu.header.get("PIXTYPE", "")).strip().upper() == "HEALPIX"
-
-    number, header, table = load_hdu(path, is_healpix, "a binary table whose header says PIXTYPE = 'HEALPIX'")
-    where = f"{path}[{number}]"
-    names = list(table.names)
-    if str(header.get("INDXSCHM", "IMPLICIT")).strip().upper() != "IMPLICIT":
-        raise InputError(f"{where}: header INDXSCHM is {header['INDXSCHM']!r}, a partial map; allowed: 'IMPLICIT'")
-    if not 0 <= field < len(names):
-        raise InputError(f"{where}: no column {field}; allowed: 0 to {len(names) - 1}, that is {', '.join(names)}")
-    raw = np.asarray(table.field(field))
-    if raw.dtype.kind not in "fiu":
-        raise InputError(f"{where}: column {field} ({names[field]}) holds {raw.dtype}; allowed: real numbers")
-    return raw.astype(np.float64).ravel(), header, where
-
-
-def _missing_pixels(values: NDArray[np.float64], header: Any) -> NDArray[np.bool_]:
-    bad = ~np.isfinite(values) | np.asarray(healpy.mask_bad(values), dtype=bool)
-    flag = header.get("BAD_DATA")
-    return bad if flag is None else np.asarray(bad | (np.abs(values - float(flag)) <= 1e-6 * abs(float(flag))))
-
-
-def _order(header: Any, declared: Ordering, where: str, problems: list[str]) -> str:
-    text = str(header.get("ORDERING", "")).strip().upper()
-    found = ORDERINGS.get(text)
-    if text and found is None:
-        problems.append(f"{where}: header ORDERING is {text!r}; allowed: {', '.join(ORDERINGS)}")
-    elif declared == "header" and found is None:
-        problems.append(f"{where}: no ORDERING in the header; declare ordering = 'ring' or 'nested'")
-    elif declared != "header" and found is not None and found != declared:
-        problems.append(f"{where}: header ORDERING is {text!r} but {declared!r} is declared; allowed: the same")
-    return found if declared == "header" and found is not None else declared
-
-
-def _check_coordsys(header: Any, frame: Frame, where: str, problems: list[str]) -> None:
-    text = str(header.get("COORDSYS", "")).strip().upper()
-    if not text:
-        return
-    frames = COORDSYS_FRAMES.get(text)
-    if frames is None:
-        problems.append(f"{where}: header COORDSYS is {text!r}; allowed: {', '.join(COORDSYS_FRAMES)}")
-    elif frame not in frames:
-        problems.append(
-            f"{where}: header COORDSYS is {text!r} but frame {frame!r} is declared; allowed: {', '.join(frames)}"
-        )
-
-
-def _own_nside(pixels: int, header: Any, where: str, problems: list[str]) -> int:
-    if not healpy.isnpixok(pixels) or not healpy.isnsideok(healpy.npix2nside(pixels), nest=True):
-        problems.append(f"{where}: {pixels} pixels; allowed: 12 nside^2, nside a power of two, the whole sphere")
-        return 0
-    nside = int(healpy.npix2nside(pixels))
-    if header.get("NSIDE", nside) != nside:
-        problems.append(f"{where}: header NSIDE is {header['NSIDE']} but {pixels} pixels make nside {nside}")
-    return nside
-
-
-def _check_nside(nside: int, own_nside: int | None, where: str, problems: list[str]) -> None:
-    if nside < 1 or not healpy.isnsideok(nside, nest=True):
-        problems.append(f"{where}: nside {nside} is wanted; allowed: a power of two")
-    elif own_nside and nside > own_nside:
-        problems.append(f"{where}: nside {nside} is finer than the map's {own_nside}; allowed: up to {own_nside}")
-
-
-def _coarser(ring: NDArray[np.float64], nside: int) -> NDArray[np.float64]:
-    return np.asarray(healpy.ud_grade(ring, nside), dtype=np.float64)

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-import healpy as hp
 import numpy as np
 from scipy.spatial.transform import Rotation
 
@@ -12,16 +11,15 @@ from sims.beam import Beam
 from sims.config import Surface
 from sims.constants import rayleigh_jeans_k
 from sims.frequency import ChannelGrid, mean_points
-from sims.moon import mirror, visible_fraction
+from sims.limb import visible_weight
+from sims.mirror import mirror
+from sims.moon import fresnel_reflectivity, layered_reflectivity, lowest_cosine
 from sims.pixel_sum import Pointing
+from sims.pixels import pixel_grid
 from sims.profile import evaluate_table
-from sims.sky_average import Scene, pixel_angle_rad, scene_axes
+from sims.sky_average import Scene, scene_axes
 
 LIMB_100_KM_RAD = np.radians(71.00998)  # angular radius of the Moon from 100 km (geometry)
-
-
-def pixel_directions(nside: int) -> np.ndarray:
-    return np.ascontiguousarray(np.stack(hp.pix2vec(nside, np.arange(12 * nside**2)), axis=1))
 
 
 @dataclass(frozen=True)
@@ -30,12 +28,8 @@ class SmoothSky:
 
     nside: int
 
-    @property
-    def directions(self) -> np.ndarray:
-        return pixel_directions(self.nside)
-
     def brightness_k(self, frequency_mhz: np.ndarray) -> np.ndarray:
-        x, y, z = self.directions.T
+        x, y, z = pixel_grid(self.nside).directions.T
         base = 2000.0 * np.exp(1.5 * z + 0.4 * np.sin(5 * x) * y)
         index = 2.5 + 0.1 * x - 0.05 * y * z
         log_f = np.log(frequency_mhz / 70.0)
@@ -48,10 +42,6 @@ class KinkedSky:
 
     nside: int
     kink_mhz: float
-
-    @property
-    def directions(self) -> np.ndarray:
-        return pixel_directions(self.nside)
 
     def brightness_k(self, frequency_mhz: np.ndarray) -> np.ndarray:
         beyond = np.clip(np.log(frequency_mhz / self.kink_mhz), 0.0, None)
@@ -66,10 +56,6 @@ class EvenSky:
     temperature_k: float
     index: float | None
 
-    @property
-    def directions(self) -> np.ndarray:
-        return pixel_directions(self.nside)
-
     def brightness_k(self, frequency_mhz: np.ndarray) -> np.ndarray:
         if self.index is None:
             spectrum = rayleigh_jeans_k(self.temperature_k, frequency_mhz)
@@ -78,48 +64,70 @@ class EvenSky:
         return np.repeat(spectrum[None], 12 * self.nside**2, axis=0)
 
 
-def moving_scene(sky: object, beam: Beam, samples: int, *, reflection: bool = True, seed: int = 3) -> Scene:
+def moving_scene(
+    sky: object, beam: Beam, samples: int, *, reflection: bool = True, seed: int = 3, **surface: object
+) -> Scene:
     """A beam fixed in the sky while the nadir goes round an orbit."""
     rng = np.random.default_rng(seed)
     attitude = np.repeat(Rotation.random(random_state=rng).as_matrix()[None], samples, axis=0)
-    angle = np.linspace(0.1, 5.9, samples)
     plane = Rotation.random(random_state=rng).as_matrix()
-    nadir = np.stack([np.cos(angle), np.sin(angle), np.zeros(samples)], axis=1) @ plane.T
-    pointing = Pointing(scene_axes(beam, attitude), np.ascontiguousarray(nadir), np.full(samples, LIMB_100_KM_RAD))
-    surface = Surface(temperature_k=230.0, permittivity=2.7, reflection=reflection)
-    return Scene(sky, beam, pointing, surface, sphere=True)  # type: ignore[arg-type]
+    pointing = along_an_orbit(scene_axes(beam, attitude), np.linspace(0.1, 5.9, samples), plane)
+    settings = {"temperature_k": 230.0, "permittivity": 2.7, "reflection": reflection} | surface
+    return Scene(sky, beam, pointing, Surface(**settings), sphere=True)  # type: ignore[arg-type]
+
+
+def along_an_orbit(
+    axes: np.ndarray, angle_rad: np.ndarray, plane: np.ndarray, limb_rad: float | np.ndarray = LIMB_100_KM_RAD
+) -> Pointing:
+    """Pointing with the nadir at these angles along a great circle."""
+    cosine, sine, zero = np.cos(angle_rad), np.sin(angle_rad), np.zeros_like(angle_rad)
+    return Pointing(
+        axes=axes,
+        nadir=np.ascontiguousarray(np.stack([cosine, sine, zero], axis=1) @ plane.T),
+        limb_angle_rad=np.broadcast_to(limb_rad, angle_rad.shape).astype(float),
+        north=np.ascontiguousarray(np.stack([-sine, cosine, zero], axis=1) @ plane.T),
+        pole=np.tile(plane[:, 1], (len(angle_rad), 1)),
+    )
 
 
 def plain_at(scene: Scene, frequency_mhz: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Antenna temperature and response by plain NumPy sums over pixels, one frequency at a time."""
-    sky, beam, pointing = scene.sky, scene.beam, scene.pointing
-    directions = sky.directions
-    image = mirror(float(pointing.limb_angle_rad[0]), scene.surface.permittivity, sphere=scene.sphere)
+    beam, pointing, surface = scene.beam, scene.pointing, scene.surface
+    pixels = pixel_grid(scene.sky.nside)
     temperature, response = (np.empty((len(pointing), len(frequency_mhz))) for _ in range(2))
     for s in range(len(pointing)):
-        nadir = pointing.nadir[s]
-        below = directions @ nadir
-        visible = visible_fraction(below, float(pointing.limb_angle_rad[s]), pixel_angle_rad(sky.nside))
-        clear = below < np.cos(pointing.limb_angle_rad[s])
-        along, down, weight = evaluate_table(image.table, -1.0, image.cosine_limb, below[clear]).T
+        nadir, limb_rad = pointing.nadir[s], float(pointing.limb_angle_rad[s])
+        below = pixels.directions @ nadir
+        visible = visible_weight(np.arccos(np.clip(below, -1.0, 1.0)), limb_rad, scene.taper_rad)
+        image = mirror(limb_rad, limb_rad, scene.taper_rad, sphere=scene.sphere)
+        last = np.cos(limb_rad - scene.taper_rad)
+        clear = below < last
+        along, down, compression, incidence = evaluate_table(image.tables[0], -1.0, last, below[clear]).T
+        incidence = np.maximum(incidence, lowest_cosine(surface))
         for j, f in enumerate(frequency_mhz):
             one = np.array([f])
-            power = _power(beam, pointing.axes[s], one, directions)
-            brightness = sky.brightness_k(one)[:, 0]
+            power = pixels.weights * _power(beam, pointing.axes[s], one, pixels.directions)
+            brightness = scene.sky.brightness_k(one)[:, 0]
             sky_sum, share = np.sum(power * visible * brightness), np.sum(power * visible)
-            if scene.surface.reflection:
-                mirrored = _power(
-                    beam, pointing.axes[s], one, along[:, None] * directions[clear] + down[:, None] * nadir
-                )
-                sky_sum += np.sum(mirrored * weight * brightness[clear])
-                share += np.sum(mirrored * weight)
+            if surface.reflection:
+                towards = along[:, None] * pixels.directions[clear] + down[:, None] * nadir
+                mirrored = pixels.weights[clear] * _power(beam, pointing.axes[s], one, towards) * visible[clear]
+                mirrored *= compression * _reflectivity(surface, incidence, one)
+                sky_sum += np.sum(mirrored * brightness[clear])
+                share += np.sum(mirrored)
             total = np.sum(power)
-            surface_k = rayleigh_jeans_k(scene.surface.temperature_k, f)
+            surface_k = rayleigh_jeans_k(surface.temperature_k, f)
             reaching = sky_sum / total + surface_k * (1 - share / total)
             structure_k = rayleigh_jeans_k(beam.structure_temperature_k, f)
             temperature[s, j] = beam.efficiency * reaching + (1 - beam.efficiency) * structure_k
             response[s, j] = beam.efficiency * share / total
     return temperature, response
+
+
+def _reflectivity(surface: Surface, incidence: np.ndarray, frequency_mhz: np.ndarray) -> np.ndarray:
+    if surface.layer is None:
+        return fresnel_reflectivity(incidence, surface.permittivity)
+    return layered_reflectivity(incidence, surface.permittivity, surface.layer, frequency_mhz)[:, 0]
 
 
 def _power(beam: Beam, axes: np.ndarray, frequency_mhz: np.ndarray, directions: np.ndarray) -> np.ndarray:

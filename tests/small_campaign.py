@@ -23,7 +23,7 @@ def small_tree(**changes: dict[str, Any]) -> dict[str, Any]:
         if keys is None:
             tree.pop(section)
         else:
-            tree[section] = {**tree[section], **keys} if "kind" not in keys else keys
+            tree[section] = {**tree.get(section, {}), **keys} if "kind" not in keys else keys
     return tree
 
 

@@ -99,7 +99,6 @@ class PatchySky:
 
     def __init__(self, nside: int) -> None:
         self.nside = nside
-        self.directions = SmoothSky(nside).directions
 
     def brightness_k(self, frequency_mhz: np.ndarray) -> np.ndarray:
         base = SmoothSky(self.nside).brightness_k(np.array([70.0]))

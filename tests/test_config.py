@@ -134,7 +134,7 @@ def test_fit_needs_its_own_sections_only(tmp_path: Path) -> None:
     with pytest.raises(InputError) as caught:
         load_config(path)
     missing = {problem.split("[")[1].split("]")[0] for problem in caught.value.problems}
-    assert missing == set(FORWARD_SECTIONS) - {"engine", "knowledge"}
+    assert missing == set(FORWARD_SECTIONS) - {"engine", "correction", "knowledge"}
     path.write_text(DEMO)
     assert type(load_fit_config(path)) is Config
     path.write_text(run + reduction + "[surface]\nreflection = true\n")
@@ -162,7 +162,7 @@ def test_all_problems_are_told_at_once(tmp_path: Path) -> None:
 
 def test_an_unknown_kind_does_not_drag_knowledge_of_its_keys_along(tmp_path: Path) -> None:
     line = only_problem(demo_with(('kind = "dipole"', 'kind = "horn"')), tmp_path)
-    assert line == 'beam.kind: got \'horn\'; allowed are "short-dipole", "dipole", "gaussian"'
+    assert line == 'beam.kind: got \'horn\'; allowed are "short-dipole", "dipole", "gaussian", "file"'
 
 
 def test_a_quantity_given_by_both_names_is_refused(tmp_path: Path) -> None:

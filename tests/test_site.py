@@ -171,7 +171,6 @@ def test_an_outdated_table_of_leap_seconds_is_not_fetched_anew() -> None:
     script = """
 import socket
 from datetime import UTC, datetime
-from types import SimpleNamespace
 from astropy.time import Time
 from astropy.utils import iers
 asked = []
@@ -181,11 +180,12 @@ def refuse(*arguments, **_):
 socket.socket.connect = socket.getaddrinfo = refuse
 iers.LeapSeconds._today = classmethod(lambda _: Time(2469807.5, format="jd", scale="tai"))
 from sims.vantage import survey_geometry
-up = SimpleNamespace(kind="vertical", azimuth_deg=0.0)
-site = SimpleNamespace(
-    kind="ground", latitude_deg=0.0, longitude_deg=0.0, height_m=0.0, horizon_deg=0.0, boresight=up
+from sims.config import GroundSite, Observation, VerticalBoresight
+up = VerticalBoresight(kind="vertical")
+site = GroundSite(kind="ground", latitude_deg=0.0, longitude_deg=0.0, height_m=0.0, boresight=up)
+when = Observation(
+    start=datetime(2049, 1, 1, tzinfo=UTC), step_s=60.0, count=9, integration_hours=1.0, duty_cycle=1.0
 )
-when = SimpleNamespace(start=datetime(2049, 1, 1, tzinfo=UTC), step_s=60.0, count=9, integration_hours=1.0, require=())
 survey_geometry(site, when)
 print("asked", len(asked))
 """

@@ -19,10 +19,13 @@ from jplephem import Ephemeris
 from numpy.typing import NDArray
 from scipy.spatial.transform import Rotation
 
-from sims.config import FixedBoresight, GroundSite, LunarOrbit, Observation, VerticalBoresight
+from sims.attitude import fixed_attitudes, pointing_turns
+from sims.config import FixedBoresight, GroundSite, LunarOrbit, LunarSurface, Observation, VerticalBoresight
+from sims.constants import EARTH_EQUATORIAL_RADIUS_KM, SUN_RADIUS_KM
 from sims.errors import InputError
-from sims.orbit import circular_period_s, lunar_equator_axes
-from sims.vantage import fixed_attitudes, pointing_turns, sample_times, survey_geometry
+from sims.moon_frame import lunar_equator_axes
+from sims.orbit import period_s
+from sims.vantage import full_geometry, sample_times, survey_geometry
 
 START = datetime(2027, 6, 1, tzinfo=UTC)
 LIMB_DEG = 71.00998  # angular radius of the Moon from 100 km: asin(1737.4/1837.4)
@@ -46,7 +49,7 @@ def observation(**changes: Any) -> Observation:
 
 def orbit(boresight: FixedBoresight | VerticalBoresight = UP, **changes: float) -> LunarOrbit:
     elements = {"altitude_km": 100.0, "inclination_deg": 70.0, "node_deg": 15.0, "phase_deg": 0.0} | changes
-    return LunarOrbit(kind="lunar-orbit", boresight=boresight, **elements)
+    return LunarOrbit(kind="lunar-orbit", boresight=boresight, oblateness=False, **elements)
 
 
 def site(boresight: FixedBoresight | VerticalBoresight = UP, **changes: float) -> GroundSite:
@@ -104,16 +107,18 @@ def test_limb_from_100_km_has_its_closed_form() -> None:
 @pytest.mark.parametrize("beta_deg", [0.0, 30.0, 60.0, 70.0])
 def test_share_of_the_orbit_behind_the_moon_has_its_closed_form(beta_deg: float) -> None:
     # Around the middle of the orbit, so that what the Earth's own motion does to beta cancels to first order.
-    period_s = circular_period_s(100.0)
-    earth_km = earth_and_sun_at(START + timedelta(seconds=period_s / 2.0))[0]
+    turn_s = period_s(100.0)
+    earth_km = earth_and_sun_at(START + timedelta(seconds=turn_s / 2.0))[0]
     earth, beta = unit(earth_km), np.deg2rad(beta_deg)
     across = unit(np.cross(earth, [0.0, 0.0, 1.0]))
     normal = np.sin(beta) * earth + np.cos(beta) * across
     vantage = orbit_about(normal, towards=unit(earth - (earth @ normal) * normal))
     count = 7067
-    geometry = survey_geometry(vantage, observation(step_s=period_s / count, count=count))
-    # Hidden within asin(R/r) of the far side for a point at infinity; at a distance d its rays spread by asin(R/d).
-    shadow_rad = np.deg2rad(LIMB_DEG) + np.arcsin(MOON_RADIUS_KM / np.linalg.norm(earth_km))
+    geometry = survey_geometry(vantage, observation(step_s=turn_s / count, count=count))
+    # Within asin(R/r) of the far side a point at infinity is hidden; the umbra of a body of radius a at a distance d
+    # is wider by asin((R - a)/d).
+    spread = (MOON_RADIUS_KM - EARTH_EQUATORIAL_RADIUS_KM) / np.linalg.norm(earth_km)
+    shadow_rad = np.deg2rad(LIMB_DEG) + np.arcsin(spread)
     share = np.arccos(min(np.cos(shadow_rad) / np.cos(beta), 1.0)) / np.pi
     # The Earth moves along it by up to 0.3 % of the spacecraft's rate (7067 s against 27.3 days), 0.0012 of 0.396,
     # and sampling by 1/7067.
@@ -121,12 +126,15 @@ def test_share_of_the_orbit_behind_the_moon_has_its_closed_form(beta_deg: float)
 
 
 def test_in_the_plane_of_a_distant_body_the_hidden_share_is_the_limb_angle_over_pi() -> None:
-    sun = unit(earth_and_sun_at(START)[1])
+    sun_km = earth_and_sun_at(START)[1]
+    sun = unit(sun_km)
     pole = lunar_equator_axes(Time(START))[2]
     vantage = orbit_about(unit(np.cross(sun, pole)), towards=sun)
     geometry = survey_geometry(vantage, observation(step_s=1.0, count=7067))
-    # 71.00998/180 for a point at infinity; the Sun's distance and motion change it by 1e-5, sampling by 1/7067.
-    assert float(geometry["sun_hidden"].mean()) == pytest.approx(LIMB_DEG / 180.0, abs=2e-4)
+    # 71.00998/180 for a point at infinity; the Sun's motion changes it by 1e-5, sampling by 1/7067.
+    assert float((geometry["sun_depth_rad"] > 0.0).mean()) == pytest.approx(LIMB_DEG / 180.0, abs=2e-4)
+    spread_deg = np.degrees(np.arcsin((MOON_RADIUS_KM - SUN_RADIUS_KM) / np.linalg.norm(sun_km)))
+    assert float(geometry["sun_hidden"].mean()) == pytest.approx((LIMB_DEG + spread_deg) / 180.0, abs=2e-4)
 
 
 def test_longest_shadow_at_100_km_is_2788_seconds() -> None:
@@ -134,7 +142,7 @@ def test_longest_shadow_at_100_km_is_2788_seconds() -> None:
     pole = lunar_equator_axes(Time(START))[2]
     # An orbit over the poles: the Sun then moves across its plane, which leaves the length of the shadow alone.
     vantage = orbit_about(unit(np.cross(sun, pole)), towards=sun)
-    hidden = survey_geometry(vantage, observation(step_s=0.5, count=14_134))["sun_hidden"].values
+    hidden = survey_geometry(vantage, observation(step_s=0.5, count=14_134))["sun_depth_rad"].values > 0.0
     edges = np.flatnonzero(np.diff(hidden.astype(int)))
     assert edges.size == 2
     # Point Sun at infinity: 2 asin(R/r) of a turn in 7067.460 s; each edge is seen to one step.
@@ -145,7 +153,7 @@ def test_what_is_hidden_agrees_with_the_line_of_sight_by_de421() -> None:
     geometry = survey_geometry(orbit(), observation(step_s=97.0, count=20_000))
     place = geometry["position_km"].values
     bodies = de421_earth_sun_from_moon_km(geometry["time"].values)
-    for index, name in enumerate(("earth_hidden", "sun_hidden")):
+    for index, name in enumerate(("earth_depth_rad", "sun_depth_rad")):
         # The line of sight meets the sphere when its nearest point to the centre lies ahead and inside the radius.
         sight = bodies[:, index] - place
         ahead = np.einsum("ta,ta->t", -place, unit(sight))
@@ -154,8 +162,46 @@ def test_what_is_hidden_agrees_with_the_line_of_sight_by_de421() -> None:
         # The two ephemerides differ by 12 arcsec at most, 35 m at the limb 600 km away: set aside the samples so close.
         clear = np.abs(nearest_km - MOON_RADIUS_KM) > 0.05
         assert clear.mean() > 0.99
-        np.testing.assert_array_equal(geometry[name].values[clear], blocked[clear])
+        np.testing.assert_array_equal(geometry[name].values[clear] > 0.0, blocked[clear])
         assert 0.2 < blocked.mean() < 0.5  # both answers are tested
+
+
+def test_eccentric_orbit_sees_a_moon_that_grows_and_shrinks() -> None:
+    vantage = orbit(altitude_km=1500.0, eccentricity=0.4)
+    geometry = full_geometry(vantage, observation(step_s=60.0, count=600))
+    distance_km = np.linalg.norm(geometry["position_km"].values, axis=1)
+    np.testing.assert_allclose(np.sin(geometry["limb_angle_rad"]), MOON_RADIUS_KM / distance_km, rtol=1e-12)
+    assert distance_km.min() == pytest.approx(0.6 * (MOON_RADIUS_KM + 1500.0), rel=1e-3)
+    assert distance_km.max() == pytest.approx(1.4 * (MOON_RADIUS_KM + 1500.0), rel=1e-3)
+    # Azimuth counts from the motion along the ground, not from the velocity, which climbs and falls.
+    np.testing.assert_allclose(np.einsum("ta,ta->t", geometry["forward"], geometry["nadir"]), 0.0, atol=1e-14)
+
+
+def test_lander_sees_the_earth_where_the_sub_earth_point_says() -> None:
+    at_sub_earth = LunarSurface(
+        kind="lunar-surface", latitude_deg=-6.05, longitude_deg=-6.92, height_m=0.0, boresight=UP
+    )
+    far_side = at_sub_earth.model_copy(update={"longitude_deg": 173.08, "latitude_deg": 6.05})
+    near, far = (full_geometry(vantage, observation(count=5)) for vantage in (at_sub_earth, far_side))
+    # Sub-Earth point of 2027-06-01T00 TDB by DE421: longitude -6.922729, latitude -6.046151 deg.
+    assert np.degrees(-near["earth_depth_rad"].values[0]) == pytest.approx(90.0, abs=0.02)
+    assert not near["earth_hidden"].any()
+    assert far["earth_hidden"].all()
+    assert np.degrees(near["limb_angle_rad"].values) == pytest.approx(90.0)
+
+
+def test_mountains_hide_the_sun_that_a_level_horizon_shows(tmp_path: Path) -> None:
+    (tmp_path / "ridge.csv").write_text("azimuth_deg,elevation_deg\n0,25\n120,25\n240,25\n")
+    span = observation(step_s=600.0, count=144)
+    level, ridge = (
+        full_geometry(vantage, span)
+        for vantage in (site(), site().model_copy(update={"horizon_file": tmp_path / "ridge.csv"}))
+    )
+    elevation_deg = np.degrees(level["sun_elevation_rad"].values)
+    between = (elevation_deg > 1.0) & (elevation_deg < 24.0)
+    assert between.any()
+    assert ridge["sun_hidden"].values[between].all()
+    assert not level["sun_hidden"].values[between].any()
 
 
 # --- the ground below -----------------------------------------------------------------------------------------------
@@ -176,7 +222,8 @@ def test_sun_sets_on_the_ground_when_astropy_says_so() -> None:
         # Aberration (21 arcsec) and UT1 beyond the measured part of the tables (1.8 s, 27 arcsec).
         clear = np.abs(altitude_deg - horizon_deg) > 48.0 / 3600.0
         assert clear.mean() > 0.95
-        np.testing.assert_array_equal(geometry["sun_hidden"].values[clear], altitude_deg[clear] < horizon_deg)
+        np.testing.assert_array_equal(geometry["sun_depth_rad"].values[clear] > 0, altitude_deg[clear] < horizon_deg)
+        assert (geometry["sun_depth_rad"].values[geometry["sun_hidden"].values] > 0.0).all()
         assert 0.4 < geometry["sun_hidden"].values.mean() < 0.8  # both answers are tested
         assert not geometry["earth_hidden"].any()
         assert "does not apply" in geometry["earth_hidden"].attrs["long_name"]
@@ -332,10 +379,13 @@ def test_dataset_is_described_and_survives_a_file(
     vantage: LunarOrbit | GroundSite, own: Literal["orbit_phase", "sidereal_time_hours"], tmp_path: Path
 ) -> None:
     geometry = survey_geometry(vantage, observation(require=("sun-hidden",), step_s=120.0))
-    assert set(geometry.data_vars) == {
-        *("position_km", "attitude", "nadir", "limb_angle_rad", "earth_hidden", "sun_hidden"),
-        *("pointing", "integration_s", own),
+    bodies = [f"{name}_direction" for name in ("earth", "sun", "moon")]
+    eclipses = [f"sun_{name}" for name in ("depth_rad", "radius_rad", "visible_fraction", "hidden")]
+    assert set(geometry.data_vars) >= {
+        *("position_km", "velocity_km_per_s", "attitude", "nadir", "forward", "pole", "limb_angle_rad", "earth_hidden"),
+        *("pointing", "integration_s", "sun_elevation_rad", own, *bodies, *eclipses),
     }
+    assert ("beta_angle_rad" in geometry) == (own == "orbit_phase")
     assert all({"units", "long_name"} <= set(geometry[name].attrs) for name in geometry.data_vars)
     np.testing.assert_allclose(np.linalg.norm(geometry["attitude"], axis=-1), 1.0, atol=1e-14)  # rounding
     geometry.to_netcdf(tmp_path / "geometry.nc", engine="h5netcdf")

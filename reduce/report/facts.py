@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from reduce.joint_fit import covariance_modes_k
 from reduce.runner import Products
 from reduce.trough_model import NAMES, POINTS
-from sims.config import Config, FitConfig, FixedBoresight, NoSignal, TurningPointSignal
+from sims.config import Config, FitConfig, FixedBoresight, NoSignal, ScheduledBoresight, TurningPointSignal
 
 FloatArray = NDArray[np.float64]
 
@@ -54,11 +54,13 @@ def bin_labels(products: Products, config: FitConfig) -> tuple[str, list[str]]:
     if not isinstance(config, Config) or config.bins.count != count:
         return "bin", numbers
     boresight = config.vantage.boresight
-    if config.bins.by == "pointing" and isinstance(boresight, FixedBoresight):
-        named = [
-            f"{number}: {ra:.0f}°, {dec:+.0f}°".replace("-", "−")
-            for number, (ra, dec) in enumerate(boresight.directions_deg)
-        ]
+    if config.bins.by == "pointing":
+        directions: list[tuple[float, float]] = []
+        if isinstance(boresight, FixedBoresight):
+            directions = list(boresight.directions_deg)
+        elif isinstance(boresight, ScheduledBoresight):
+            directions = [target.direction_deg for target in boresight.targets]
+        named = [f"{number}: {ra:.0f}°, {dec:+.0f}°".replace("-", "−") for number, (ra, dec) in enumerate(directions)]
         return "bin: boresight RA, Dec", named
     span, unit = {"orbit-phase": (1.0, ""), "sidereal-time": (24.0, " h")}.get(config.bins.by, (0.0, ""))
     if span == 0.0:

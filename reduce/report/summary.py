@@ -202,8 +202,9 @@ def _left_out(products: Products, config: FitConfig) -> list[str]:
     fields = [name for name in ("index_field", "map_noise") if getattr(config.knowledge, name) is not None]
     if fields:
         lines.append(f"from the covariance, though a drawn truth has it: knowledge.{', knowledge.'.join(fields)}")
+    roughness = "roughness of the surface" if config.surface.layer else "roughness and layers of the surface"
     lines.append(
-        "ionosphere; Sun and Earth as sources; temperature drifts of the instrument; interference; roughness and "
-        "layers of the surface; any error of the receiver but scale, offset and one ripple"
+        "ionosphere; Sun and Earth as sources in the beam; temperature drifts of the instrument; interference; "
+        f"{roughness}; any error of the receiver but scale, offset and one ripple"
     )
     return lines

@@ -1,0 +1,142 @@
+"""Beams from files: reader by format, error patterns mixed in, missing power accounted for.
+
+The door between the readers and the engine: `antenna_from` makes any ``[beam]`` table, closed
+form or file, into what the engine integrates.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from functools import lru_cache
+
+import numpy as np
+
+from sims.beam import Beam, Ripple, beam_from, mounting_matrix
+from sims.beam_grid import GridBeam, grid_beam
+from sims.beam_healpix import read_healpix_files
+from sims.beam_nec import read_nec_files
+from sims.beam_netcdf import read_netcdf_file
+from sims.beam_spline import angular_spline
+from sims.beam_table_file import read_table_files
+from sims.config_beam import Beam as BeamSettings
+from sims.config_beam import FileBeam, HealpixSource, NecSource, NetcdfSource, Source, TableSource
+from sims.errors import InputError, raise_if_any
+from sims.far_field import FarField
+
+NORMALISED = 0.02  # how far the mean over the sphere of a directivity may lie from 1, and a gain's above it
+_KEPT_TABLES = 16
+
+
+def antenna_from(settings: BeamSettings) -> Beam | GridBeam:
+    """Beam as configured.
+
+    Parameters
+    ----------
+    settings : Beam
+        The ``[beam]`` table.
+
+    Returns
+    -------
+    Beam or GridBeam
+
+    Raises
+    ------
+    InputError
+        If a file cannot be read or does not hold what the settings say.
+    """
+    if isinstance(settings, FileBeam):
+        return _file_beam(settings)
+    return beam_from(settings)
+
+
+def read_far_field(source: Source) -> FarField:
+    """Read a pattern; kept in memory until its files change.
+
+    Parameters
+    ----------
+    source : Source
+        Format, files, and what the format leaves open.
+
+    Returns
+    -------
+    FarField
+
+    Raises
+    ------
+    InputError
+        With every fault of the files, each with its place.
+    """
+    files = (source.file,) if isinstance(source, NetcdfSource) else source.files
+    return _read(source, tuple((path.stat().st_mtime_ns, path.stat().st_size) for path in files))
+
+
+@lru_cache(maxsize=_KEPT_TABLES)
+def _read(source: Source, stamps: tuple[tuple[int, int], ...]) -> FarField:
+    """Every move of a beam by its error asks for the same tables: `stamps` says whether they are still those."""
+    if isinstance(source, NecSource):
+        return read_nec_files(source)
+    if isinstance(source, TableSource):
+        return read_table_files(source)
+    if isinstance(source, HealpixSource):
+        return read_healpix_files(source)
+    return read_netcdf_file(source)
+
+
+def _file_beam(settings: FileBeam) -> GridBeam:
+    table = _mixed(read_far_field(settings.source), settings)
+    raise_if_any(_normalisation_problems(table, settings))
+    if settings.dimension_scale != 1.0:
+        # An antenna twice as large has the pattern of half the wavelength.
+        table = replace(table, frequency_mhz=table.frequency_mhz / settings.dimension_scale)
+    return grid_beam(
+        table,
+        smoothing_mhz=settings.smoothing_mhz,
+        mounting=mounting_matrix(settings.tilt_deg, settings.tilt_azimuth_deg, settings.turn_deg),
+        efficiency=settings.efficiency,
+        structure_temperature_k=settings.structure_temperature_k,
+        missing_power=settings.missing_power,
+        ripple=Ripple.of(settings),
+    )
+
+
+def _mixed(table: FarField, settings: FileBeam) -> FarField:
+    """The pattern moved towards those of ``[[beam.modes]]`` by their amplitudes."""
+    moving = [(number, mode) for number, mode in enumerate(settings.modes) if mode.amplitude != 0.0]
+    if not moving:
+        return table
+    power, problems = table.power.copy(), []
+    for number, mode in moving:
+        other = read_far_field(mode.source)
+        same = all(
+            np.array_equal(getattr(table, axis), getattr(other, axis))
+            for axis in ("frequency_mhz", "theta_deg", "phi_deg")
+        )
+        if same:
+            power += mode.amplitude * (other.power - table.power)
+        else:
+            problems.append(
+                f"beam.modes.{number}: {other.source} has another grid than {table.source}; give both the same"
+            )
+    raise_if_any(problems)
+    if (power < 0.0).any():
+        amplitudes = ", ".join(f"beam.modes.{number}.amplitude = {mode.amplitude:g}" for number, mode in moving)
+        raise InputError(f"{amplitudes}: the power becomes negative in {int((power < 0.0).sum())} cells")
+    sphere = angular_spline(table.theta_deg, table.phi_deg, upper_half=table.upper_half)
+    return replace(table, power=power, radiated_fraction=sphere.mean(power), e_theta=None, e_phi=None)
+
+
+def _normalisation_problems(table: FarField, settings: FileBeam) -> list[str]:
+    if settings.missing_power == "numerical":
+        return []
+    lowest, highest = float(table.radiated_fraction.min()), float(table.radiated_fraction.max())
+    if settings.quantity == "directivity" and (lowest < 1.0 - NORMALISED or highest > 1.0 + NORMALISED):
+        return [
+            f"{table.source}: the mean of a directivity over the sphere is 1, here {lowest:.4f} to {highest:.4f}; "
+            f'allowed is {NORMALISED:g} to either side: is it a gain? or declare missing_power = "numerical"'
+        ]
+    if highest > 1.0 + NORMALISED:
+        return [
+            f"{table.source}: a mean gain of {highest:.4f} over the sphere radiates more than went in; allowed is "
+            f'{1.0 + NORMALISED:g}: are these dB or linear? or declare missing_power = "numerical"'
+        ]
+    return []
