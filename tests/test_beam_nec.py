@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable
 from pathlib import Path
 
@@ -9,7 +10,7 @@ import numpy as np
 import pytest
 from nec_cases import Run, columns, header, listing, rows, run, two_metre_dipole, written
 from scipy.special import iv
-from table_cases import dipole, unit_vectors
+from table_cases import beam_of, dipole, random_directions, unit_vectors
 
 from sims.beam_nec import read_nec_files
 from sims.config_beam import NecSource
@@ -139,10 +140,8 @@ def test_print_out_of_the_code_itself() -> None:
     table = read_nec_files(NecSource(format="nec", files=(PRINTED,)))
     assert table.frequency_mhz == pytest.approx([40.0, 100.0], abs=0)
     assert table.power.shape == (2, 13, 12)
-    printed = [[float(word) for word in line.split()[:5]] for line in PRINTED.read_text().splitlines()
-               if len(line.split()) in (11, 12) and line.split()[0].replace(".", "").isdigit() and "E" in line
-               and line.split()[1].count(".") == 1 and len(line.split()[0].split(".")[-1]) == 2]  # fmt: skip
-    theta, phi, total = np.array(printed).T[[0, 1, 4]]
+    rounded = re.findall(r"^ +(\d+\.\d\d) +(\d+\.\d\d) +\S+ +\S+ +(\S+) ", PRINTED.read_text(), re.MULTILINE)
+    theta, phi, total = np.array(rounded, dtype=float).T
     assert len(total) == table.power.size
     for number in range(2):
         half = slice(number * len(total) // 2, (number + 1) * len(total) // 2)
@@ -150,9 +149,8 @@ def test_print_out_of_the_code_itself() -> None:
         bright = total[half] > -30.0
         # Half of the last printed digit, and the five digits of field and input power.
         assert np.abs(dbi(table.power[number, row, column][bright]) - total[half][bright]).max() < 0.0065
-    ours = read_nec_files(NecSource(format="nec", files=(PRINTED,))).power[:, 0, 0] / table.radiated_fraction
     # The 15-deg grid's own quadrature adds 2e-4 dB to the 1.8688 and 2.5565 of the fine grid.
-    assert dbi(ours) == pytest.approx([1.8688, 2.5565], abs=2e-3)
+    assert dbi(directivity(table)[:, 0, 0]) == pytest.approx([1.8688, 2.5565], abs=2e-3)
 
 
 @pytest.mark.parametrize("style", [{"fortran": True}, {"blank_sense": True}, {"fortran": True, "blank_sense": True}])
@@ -291,3 +289,36 @@ def test_numbers_as_fortran_prints_them(printed: str, value: float, tmp_path: Pa
     scale = np.abs(plain.e_theta[0, 1, 0]) / float(words[8])
     # The sum and its parts are rounded in double precision only.
     assert np.abs(table.e_phi[0, 1, 0]) == pytest.approx(scale * value, rel=1e-9, abs=1e-90)
+
+
+def with_rows(antenna: Run, chosen: list[str]) -> list[str]:
+    return [*header(antenna.frequency_mhz, antenna.input_power_w, fortran=False), *columns(fortran=False), *chosen]
+
+
+def test_nothing_below_a_plane_makes_an_upper_half(tmp_path: Path) -> None:
+    """Over a ground the code leaves out the rows past 90 deg; a print-out that holds zeros there says the same."""
+    plane = run((0, 0, 0, 0, 0, 0.25), 1e-5, 21, 1, METRE_WAVE_MHZ, plane=True, step_deg=15.0)
+    below = 180.0 - plane.theta_deg[:-1]
+    dark = Run(**{**vars(plane), "theta_deg": below, **{
+        name: np.zeros(len(below) * len(plane.phi_deg)) for name in ("e_theta", "e_phi")
+    }, "gain_db": np.full(len(below) * len(plane.phi_deg), -999.99)})  # fmt: skip
+    both = read_nec_files(written(tmp_path / "both.txt", with_rows(plane, [*rows(plane), *rows(dark)])))
+    assert both.upper_half
+    assert any("taken as an upper half" in note for note in both.notes)
+    assert np.array_equal(both.power, read(tmp_path, plane).power)
+    off = [line for line in [*rows(plane), *rows(dark)] if float(line.split()[0]) != 90.0]
+    with pytest.raises(InputError, match="no row stands there"):
+        read_nec_files(written(tmp_path / "off.txt", with_rows(plane, off)))
+
+
+def test_equal_fields_everywhere_are_an_isotropic_beam(tmp_path: Path) -> None:
+    antenna = two_metre_dipole(60.0, step_deg=10.0)
+    count = len(antenna.e_theta)
+    gain = np.full(count, float(dbi(4 * np.pi / (2 * 376.730313 * 0.0125))))
+    equal = Run(**{**vars(antenna), "e_theta": np.full(count, 1.0), "e_phi": np.zeros(count), "gain_db": gain})
+    table = read_nec_files(written(tmp_path / "equal.txt", listing([
+        Run(**{**vars(equal), "frequency_mhz": value, "input_power_w": 0.0125}) for value in FIVE_MHZ
+    ])))  # fmt: skip
+    values = beam_of(table).directivity(np.array([47.0, 93.0]), random_directions(np.random.default_rng(1), 100))
+    # The numbers are printed without loss, so only double precision is left.
+    assert np.abs(values - 1.0).max() < 1e-12
