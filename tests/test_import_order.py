@@ -105,6 +105,7 @@ ORDER = (
     "reduce.report",
     "reduce.report.facts",
     "reduce.report.style",
+    "reduce.report.files",
     "reduce.report.spectra_plot",
     "reduce.report.residuals_plot",
     "reduce.report.trough_plot",

@@ -7,6 +7,7 @@ from pathlib import Path
 
 import numpy as np
 
+from reduce.report.files import claim, write_all
 from reduce.report.sky_plot import index_figure, maps_figure, spectrum_figure
 from reduce.report.style import look, png
 from reduce.sky_card import (
@@ -23,8 +24,6 @@ from sims.config import Config
 from sims.config_load import load_config
 from sims.config_sky import Background, CubeSky, FreeFree, JoinedSky
 from sims.constants import CMB_TEMPERATURE_K, rayleigh_jeans_k
-from sims.errors import InputError
-from sims.products import write_bytes, write_text
 
 PAGE = "sky.txt"
 EXACT = 1e-9
@@ -56,29 +55,15 @@ def report_sky(config_path: Path, out: Path | None, *, update: bool) -> str:
     """
     config = load_config(config_path)
     if out is not None:
-        _check_free(out, update=update)
+        claim(out, (PAGE, *FIGURES), update=update)
     card = sky_card(config)
     page = sky_page(card, config)
     if out is None:
         return page
     with look():
         pictures = {name: png(figure(card, config)) for name, figure in FIGURES.items()}
-    try:
-        out.mkdir(parents=True, exist_ok=True)
-        write_text(out / PAGE, page + "\n")
-        for name, picture in pictures.items():
-            write_bytes(out / name, picture)
-    except OSError as error:
-        raise InputError(f"--out: {out} cannot be written to ({error.strerror})") from None
+    write_all(out, {PAGE: page + "\n", **pictures})
     return f"{page}\n\nwrote {', '.join((PAGE, *FIGURES))} to {out}"
-
-
-def _check_free(out: Path, *, update: bool) -> None:
-    if out.exists() and not out.is_dir():
-        raise InputError(f"--out: {out} is a file; name a folder")
-    there = [name for name in (PAGE, *FIGURES) if (out / name).exists()]
-    if there and not update:
-        raise InputError(f"--out: {out} already holds {', '.join(there)}; name another folder, or give --update")
 
 
 def sky_page(card: SkyCard, config: Config) -> str:

@@ -12,13 +12,12 @@ from pathlib import Path
 
 import numpy as np
 
+from reduce.report.files import claim, write_all
 from reduce.report.style import look, png
 from reduce.report.timeline_plot import timeline_figure
 from reduce.timeline import Timeline, timeline
 from sims.config import Config
 from sims.config_load import load_config
-from sims.errors import InputError
-from sims.products import write_bytes, write_text
 from sims.windows import Windows
 
 TABLE, PICTURE = "timeline.csv", "timeline.png"
@@ -59,28 +58,11 @@ def report_timeline(config_path: Path, out: Path, *, update: bool) -> str:
     config = load_config(config_path)
     found = timeline(config)
     names = (TABLE, TURN_TABLES[found.turns.unit], PICTURE)
-    _claim(out, names, update=update)
+    claim(out, names, update=update)
     with look():
         picture = png(timeline_figure(found, config))
-    try:
-        write_text(out / names[0], windows_csv(found))
-        write_text(out / names[1], turns_csv(found))
-        write_bytes(out / names[2], picture)
-    except OSError as error:
-        raise InputError(f"--out: {out} cannot be written to ({error.strerror})") from None
+    write_all(out, dict(zip(names, (windows_csv(found), turns_csv(found), picture), strict=True)))
     return f"{timeline_page(found, config)}\n\nwrote {', '.join(names)} to {out}"
-
-
-def _claim(out: Path, names: Sequence[str], *, update: bool) -> None:
-    if out.exists() and not out.is_dir():
-        raise InputError(f"--out: {out} is a file; name a folder")
-    there = [name for name in names if (out / name).exists()]
-    if there and not update:
-        raise InputError(f"--out: {out} already holds {', '.join(there)}; name another folder, or give --update")
-    try:
-        out.mkdir(parents=True, exist_ok=True)
-    except OSError as error:
-        raise InputError(f"--out: {out} cannot be made ({error.strerror})") from None
 
 
 def windows_csv(found: Timeline) -> str:
