@@ -122,6 +122,8 @@ def grazing_angle_rad(from_nadir_rad: FloatArray, limb_angle_rad: float) -> Floa
     grazing = np.clip(0.5 * (from_nadir_rad - limb_angle_rad), -np.pi / 4, np.pi / 2)
     for _ in range(NEWTON_STEPS):
         excess = source_angle_rad(grazing, limb_angle_rad) - from_nadir_rad
+        if np.abs(excess).max(initial=0.0) < 2e-15:
+            break
         grazing = np.clip(grazing - excess / (2.0 + _image_rate(grazing, limb_angle_rad)), -np.pi / 4, np.pi / 2)
     return grazing
 

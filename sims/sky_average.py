@@ -31,6 +31,8 @@ FloatArray = NDArray[np.float64]
 BATCH_FREQUENCIES = 32
 MAX_HALVINGS = 12
 NODE_GROWTH = 1.4
+MIRROR_STEP_RAD = 0.05
+HIGHEST_LIMB_RAD = 1.56  # a sphere seen from 100 m: no orbit is lower
 
 
 class Sky(Protocol):
@@ -248,7 +250,12 @@ def _mirror_below(scene: Scene, taper_rad: float) -> Mirror | None:
     if not scene.surface.reflection:
         return None
     limb = scene.pointing.limb_angle_rad
-    return mirror(float(limb.min()), float(limb.max()), taper_rad, sphere=scene.sphere)
+    lowest, highest = float(limb.min()), float(limb.max())
+    if highest - lowest > 1e-9:
+        # Some samples and all of them then share one set of tables.
+        lowest = MIRROR_STEP_RAD * np.floor(lowest / MIRROR_STEP_RAD)
+        highest = min(MIRROR_STEP_RAD * np.ceil(highest / MIRROR_STEP_RAD), HIGHEST_LIMB_RAD)
+    return mirror(max(lowest, 2.0 * taper_rad), highest, taper_rad, sphere=scene.sphere)
 
 
 def _spread(count: int, wanted: int) -> NDArray[np.int64]:
