@@ -187,3 +187,53 @@ def sum_samples(  # type: ignore[no-untyped-def]
             response[s, j] = sums[1, j] / sums[0, j]
             polar[s, j] = emitted[j] / sums[0, j]
             beam_sum[s, j] = sums[0, j]
+
+
+@njit(parallel=True, cache=True, error_model="numpy", fastmath={"contract"})
+def spread_samples(  # type: ignore[no-untyped-def]
+    directions, weights, share, tables, grid, layout, axes, nadir, north, east, limb_rad,
+    cosine_hidden, cosine_clear, taper_rad, taper, level, horizon, mirror_tables, cosine_last,
+    reflectivity, lowest_cosine, mean_beam,
+):  # fmt: skip
+    """Add to `mean_beam` ndarray[pixel, frequency] what each pixel's brightness counts in the mean of the samples.
+
+    `share` ndarray[time, frequency] is the weight of a sample over the sum of its beam. The
+    loops of `sum_samples` the other way round: pixels outside, so that threads do not meet.
+    """
+    frequencies = share.shape[1]
+    last = axes.shape[1] - 1
+    last_mirror, mirror_intervals = mirror_tables.shape[0] - 1, mirror_tables.shape[1]
+    product = tables.shape[0] > 0
+    for p in prange(len(directions)):
+        gain, total = np.empty(frequencies), np.zeros(frequencies)
+        for s in range(len(nadir)):
+            n, down = directions[p], nadir[s]
+            one, two, three = axes[s, 0], axes[s, min(1, last)], axes[s, last]
+            below, first, second, third = dot(n, down), dot(n, one), dot(n, two), dot(n, three)
+            if below > cosine_hidden[s]:
+                continue
+            visible = 1.0
+            if below > cosine_clear[s]:
+                visible = visible_weight(n, below, limb_rad[s], taper_rad, taper, level, horizon, north[s], east[s])
+            if product:
+                product_gain(tables, first, second, gain)
+            else:
+                grid_gain(grid, layout, first, second, third, gain)
+            for j in range(frequencies):
+                total[j] += share[s, j] * visible * gain[j]
+            if below < cosine_last[s]:
+                image = mirror_tables[min(np.int64(s), last_mirror)]
+                scaled = (below + 1.0) * (mirror_intervals / (cosine_last[s] + 1.0))
+                along, towards, compression, incidence = image_of(image, scaled)
+                first = min(max(along * first + towards * dot(one, down), -1.0), 1.0)
+                second = min(max(along * second + towards * dot(two, down), -1.0), 1.0)
+                third = min(max(along * third + towards * dot(three, down), -1.0), 1.0)
+                if product:
+                    product_gain(tables, first, second, gain)
+                else:
+                    grid_gain(grid, layout, first, second, third, gain)
+                for j in range(frequencies):
+                    back = reflected_share(reflectivity, incidence, lowest_cosine, min(j, reflectivity.shape[2] - 1))
+                    total[j] += share[s, j] * visible * compression * back * gain[j]
+        for j in range(frequencies):
+            mean_beam[p, j] += weights[p] * total[j]

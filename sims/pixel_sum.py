@@ -162,7 +162,7 @@ def pixel_sums(
     horizon_table = _NO_HORIZON if ground.horizon is None else ground.horizon.table
     for rows in _chunks(len(pointing)):
         part = pointing.part(rows)
-        cosine_hidden, cosine_clear = _undoubted(part, ground, taper_rad)
+        cosine_hidden, cosine_clear = undoubted(part, ground, taper_rad)
         if ground.mirror is None:
             mirror_tables, cosine_last = np.zeros((1, 1, 4, 4)), np.full(len(part), -2.0)
         else:
@@ -178,8 +178,8 @@ def pixel_sums(
     return PixelSums(sky_k, response, polar, beam_sum)
 
 
-def _undoubted(pointing: Pointing, ground: Ground, taper_rad: float) -> tuple[FloatArray, FloatArray]:
-    """Cosines from the nadir above which a direction is hidden, and below which it is clear, without a further look."""
+def undoubted(pointing: Pointing, ground: Ground, taper_rad: float) -> tuple[FloatArray, FloatArray]:
+    """Cosines from the nadir above which a direction is hidden, and below which it is clear: ndarray[time] twice."""
     lowest, highest = pointing.limb_angle_rad, pointing.limb_angle_rad
     if ground.horizon is not None:
         lowest = np.full(len(pointing), np.pi / 2 + ground.horizon.lowest_rad)

@@ -24,7 +24,7 @@ from sims.horizon import Horizon
 from sims.limb import taper_width_rad
 from sims.mirror import Mirror, mirror
 from sims.moon import lowest_cosine, reflectivity_table, surface_brightness_k
-from sims.pixel_sum import Ground, Pattern, Pointing, pixel_sums
+from sims.pixel_sum import Ground, Pattern, PixelSums, Pointing, pixel_sums
 from sims.pixels import pixel_grid
 
 FloatArray = NDArray[np.float64]
@@ -195,7 +195,7 @@ def evaluate(scene: Scene, frequency_mhz: FloatArray, advance: Callable[[int], N
         eta times the part of the beam that meets the sky, straight or mirrored.
     """
     taper_rad = scene.taper_rad
-    image = _mirror_below(scene, taper_rad)
+    image = mirror_below(scene, taper_rad)
     batches = np.array_split(frequency_mhz, int(np.ceil(len(frequency_mhz) / BATCH_FREQUENCIES)))
     done = [0]
 
@@ -211,25 +211,39 @@ def evaluate(scene: Scene, frequency_mhz: FloatArray, advance: Callable[[int], N
 def _evaluate_batch(
     scene: Scene, frequency_mhz: FloatArray, image: Mirror | None, taper_rad: float, advance: Callable[[int], None]
 ) -> tuple[FloatArray, FloatArray]:
-    beam, surface, pixels = scene.beam, scene.surface, pixel_grid(scene.sky.nside)
-    ground = Ground(
-        mirror=image,
-        reflectivity=reflectivity_table(surface, frequency_mhz),
-        lowest_cosine=lowest_cosine(surface),
-        horizon=scene.horizon,
-        warmer_poles=surface.polar_temperature_k is not None,
-        sphere=scene.sphere,
-    )
+    pixels = pixel_grid(scene.sky.nside)
     sums = pixel_sums(
         pixels.directions,
         pixels.weights,
         np.ascontiguousarray(scene.sky.brightness_k(frequency_mhz)),
-        _pattern(beam, frequency_mhz),
+        pattern_of(scene.beam, frequency_mhz),
         scene.pointing,
-        ground,
+        ground_of(scene, image, frequency_mhz),
         taper_rad,
         advance,
     )
+    return at_the_antenna(scene.beam, scene.surface, frequency_mhz, sums)
+
+
+def at_the_antenna(
+    beam: Beam | GridBeam, surface: Surface, frequency_mhz: FloatArray, sums: PixelSums
+) -> tuple[FloatArray, FloatArray]:
+    """Antenna temperature and response from the sums over pixels: emission and losses added.
+
+    Parameters
+    ----------
+    beam : Beam or GridBeam
+    surface : Surface
+    frequency_mhz : ndarray[frequency]
+        Frequency, MHz.
+    sums : PixelSums
+        Of samples, or means of them: all this is linear in the sums.
+
+    Returns
+    -------
+    antenna_temperature_k, signal_response : ndarray[row, frequency]
+        As `evaluate`.
+    """
     equator_k, change_k = surface_brightness_k(surface, frequency_mhz)
     structure_k = rayleigh_jeans_k(beam.structure_temperature_k, frequency_mhz)
     reaching = sums.sky_k + equator_k * (1.0 - sums.response) + change_k * sums.polar
@@ -238,7 +252,7 @@ def _evaluate_batch(
     return efficiency * received + (1.0 - efficiency) * structure_k, efficiency * (1.0 - lost) * sums.response
 
 
-def _pattern(beam: Beam | GridBeam, frequency_mhz: FloatArray) -> Pattern:
+def pattern_of(beam: Beam | GridBeam, frequency_mhz: FloatArray) -> Pattern:
     """The beam in the form the kernel reads."""
     count = len(frequency_mhz)
     if isinstance(beam, GridBeam):
@@ -246,7 +260,21 @@ def _pattern(beam: Beam | GridBeam, frequency_mhz: FloatArray) -> Pattern:
     return Pattern(beam_tables(beam, frequency_mhz), np.zeros((4, 4, count)), np.zeros(5))
 
 
-def _mirror_below(scene: Scene, taper_rad: float) -> Mirror | None:
+def ground_of(scene: Scene, image: Mirror | None, frequency_mhz: FloatArray) -> Ground:
+    """What the body below does with the sky, in the form the kernel reads."""
+    surface = scene.surface
+    return Ground(
+        mirror=image,
+        reflectivity=reflectivity_table(surface, frequency_mhz),
+        lowest_cosine=lowest_cosine(surface),
+        horizon=scene.horizon,
+        warmer_poles=surface.polar_temperature_k is not None,
+        sphere=scene.sphere,
+    )
+
+
+def mirror_below(scene: Scene, taper_rad: float) -> Mirror | None:
+    """Tables of the mirror image for all samples of a scene; None where nothing is reflected."""
     if not scene.surface.reflection:
         return None
     limb = scene.pointing.limb_angle_rad
