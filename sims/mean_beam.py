@@ -8,7 +8,7 @@ of its brightness times these weights, exactly what the engine would give.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -78,19 +78,20 @@ def mean_beam(
     pixels, taper_rad = pixel_grid(scene.sky.nside), scene.taper_rad
     image, pattern = mirror_below(scene, taper_rad), pattern_of(scene.beam, frequency_mhz)
     ground = ground_of(scene, image, frequency_mhz)
+    unmirrored = replace(ground, mirror=None)
     dark = np.zeros((len(pixels.directions), len(frequency_mhz)))
     totals = np.bincount(bin_of_sample, weight, minlength=bins)
     on_sky = np.zeros((bins, *dark.shape))
-    response, polar = np.zeros((2, bins, len(frequency_mhz)))
+    polar = np.zeros((bins, len(frequency_mhz)))
     for number in range(bins):
         members = np.flatnonzero(bin_of_sample == number)
         for start in range(0, len(members), CHUNK_SAMPLES):
             rows = members[start : start + CHUNK_SAMPLES]
             part, own = scene.pointing.part(rows), (weight[rows] / totals[number])[:, None]
+            # The sum of the beam alone is wanted, and what the latitude of the ground adds: no mirror.
             sums = pixel_sums(
-                pixels.directions, pixels.weights, dark, pattern, part, ground, taper_rad, lambda done: None
+                pixels.directions, pixels.weights, dark, pattern, part, unmirrored, taper_rad, lambda done: None
             )
-            response[number] += (own * sums.response).sum(axis=0)
             polar[number] += (own * sums.polar).sum(axis=0)
             hidden, clear = undoubted(part, ground, taper_rad)
             tables, last = (_NO_MIRROR, np.full(len(rows), -2.0))
@@ -104,4 +105,4 @@ def mean_beam(
                 tables, last, ground.reflectivity, ground.lowest_cosine, on_sky[number],
             )  # fmt: skip
             advance(len(rows))
-    return MeanBeam(on_sky, response, polar)
+    return MeanBeam(on_sky, on_sky.sum(axis=1), polar)

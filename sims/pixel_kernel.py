@@ -189,6 +189,24 @@ def sum_samples(  # type: ignore[no-untyped-def]
             beam_sum[s, j] = sums[0, j]
 
 
+@njit(inline="always")
+def add_weighted(tables, first, second, weight, share, s, total):  # type: ignore[no-untyped-def]
+    """Add a direction of a beam of one or two profiles, weighted by its sample's share."""
+    intervals = tables.shape[1]
+    cell, t = cell_of((first + 1.0) * (0.5 * intervals), intervals)
+    c = tables[0, cell]
+    if tables.shape[0] == 1:
+        for j in range(len(total)):
+            total[j] += weight * share[s, j] * (((c[3, j] * t + c[2, j]) * t + c[1, j]) * t + c[0, j])
+    else:
+        cell, u = cell_of((second + 1.0) * (0.5 * intervals), intervals)
+        d = tables[1, cell]
+        for j in range(len(total)):
+            gain = ((c[3, j] * t + c[2, j]) * t + c[1, j]) * t + c[0, j]
+            gain *= ((d[3, j] * u + d[2, j]) * u + d[1, j]) * u + d[0, j]
+            total[j] += weight * share[s, j] * gain
+
+
 @njit(parallel=True, cache=True, error_model="numpy", fastmath={"contract"})
 def spread_samples(  # type: ignore[no-untyped-def]
     directions, weights, share, tables, grid, layout, axes, nadir, north, east, limb_rad,
@@ -203,37 +221,49 @@ def spread_samples(  # type: ignore[no-untyped-def]
     frequencies = share.shape[1]
     last = axes.shape[1] - 1
     last_mirror, mirror_intervals = mirror_tables.shape[0] - 1, mirror_tables.shape[1]
-    product = tables.shape[0] > 0
+    product, columns = tables.shape[0] > 0, reflectivity.shape[2] - 1
     for p in prange(len(directions)):
         gain, total = np.empty(frequencies), np.zeros(frequencies)
+        x, y, z = directions[p, 0], directions[p, 1], directions[p, 2]
         for s in range(len(nadir)):
-            n, down = directions[p], nadir[s]
-            one, two, three = axes[s, 0], axes[s, min(1, last)], axes[s, last]
-            below, first, second, third = dot(n, down), dot(n, one), dot(n, two), dot(n, three)
+            below = x * nadir[s, 0] + y * nadir[s, 1] + z * nadir[s, 2]
             if below > cosine_hidden[s]:
                 continue
             visible = 1.0
             if below > cosine_clear[s]:
-                visible = visible_weight(n, below, limb_rad[s], taper_rad, taper, level, horizon, north[s], east[s])
+                visible = visible_weight(
+                    directions[p], below, limb_rad[s], taper_rad, taper, level, horizon, north[s], east[s]
+                )
+            first = x * axes[s, 0, 0] + y * axes[s, 0, 1] + z * axes[s, 0, 2]
+            b = min(1, last)
+            second = x * axes[s, b, 0] + y * axes[s, b, 1] + z * axes[s, b, 2]
+            third = x * axes[s, last, 0] + y * axes[s, last, 1] + z * axes[s, last, 2]
             if product:
-                product_gain(tables, first, second, gain)
+                add_weighted(tables, first, second, visible, share, s, total)
             else:
                 grid_gain(grid, layout, first, second, third, gain)
-            for j in range(frequencies):
-                total[j] += share[s, j] * visible * gain[j]
-            if below < cosine_last[s]:
-                image = mirror_tables[min(np.int64(s), last_mirror)]
-                scaled = (below + 1.0) * (mirror_intervals / (cosine_last[s] + 1.0))
-                along, towards, compression, incidence = image_of(image, scaled)
-                first = min(max(along * first + towards * dot(one, down), -1.0), 1.0)
-                second = min(max(along * second + towards * dot(two, down), -1.0), 1.0)
-                third = min(max(along * third + towards * dot(three, down), -1.0), 1.0)
-                if product:
-                    product_gain(tables, first, second, gain)
-                else:
-                    grid_gain(grid, layout, first, second, third, gain)
                 for j in range(frequencies):
-                    back = reflected_share(reflectivity, incidence, lowest_cosine, min(j, reflectivity.shape[2] - 1))
-                    total[j] += share[s, j] * visible * compression * back * gain[j]
+                    total[j] += share[s, j] * visible * gain[j]
+            if below < cosine_last[s]:
+                scaled = (below + 1.0) * (mirror_intervals / (cosine_last[s] + 1.0))
+                along, towards, compression, incidence = image_of(mirror_tables[min(s, last_mirror)], scaled)
+                weight = visible * compression
+                down = axes[s, 0, 0] * nadir[s, 0] + axes[s, 0, 1] * nadir[s, 1] + axes[s, 0, 2] * nadir[s, 2]
+                first = min(max(along * first + towards * down, -1.0), 1.0)
+                down = axes[s, b, 0] * nadir[s, 0] + axes[s, b, 1] * nadir[s, 1] + axes[s, b, 2] * nadir[s, 2]
+                second = min(max(along * second + towards * down, -1.0), 1.0)
+                down = axes[s, last, 0] * nadir[s, 0] + axes[s, last, 1] * nadir[s, 1] + axes[s, last, 2] * nadir[s, 2]
+                third = min(max(along * third + towards * down, -1.0), 1.0)
+                if product and columns == 0:
+                    weight *= reflected_share(reflectivity, incidence, lowest_cosine, 0)
+                    add_weighted(tables, first, second, weight, share, s, total)
+                else:
+                    if product:
+                        product_gain(tables, first, second, gain)
+                    else:
+                        grid_gain(grid, layout, first, second, third, gain)
+                    for j in range(frequencies):
+                        back = reflected_share(reflectivity, incidence, lowest_cosine, min(j, columns))
+                        total[j] += share[s, j] * weight * back * gain[j]
         for j in range(frequencies):
             mean_beam[p, j] += weights[p] * total[j]

@@ -42,12 +42,6 @@ def test_any_sky_through_the_mean_beam_is_the_mean_of_the_engine(surface: dict[s
             assert got[1][number] == pytest.approx((share * response).sum(axis=0), rel=1e-11)
 
 
-def test_weights_add_up_to_the_response() -> None:
-    scene = moving_scene(SmoothSky(16), OVER_PLANE, 10)
-    found = mean_beam(scene, FREQUENCY, BIN, WEIGHT, 3, quiet)
-    assert found.on_sky.sum(axis=1) == pytest.approx(found.response, rel=1e-11)
-
-
 def test_a_bin_without_samples_stays_empty() -> None:
     scene = moving_scene(SmoothSky(8), OVER_PLANE, 10)
     found = mean_beam(scene, FREQUENCY, np.zeros(10, dtype=np.int64), WEIGHT, 2, quiet)
