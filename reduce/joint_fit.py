@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from reduce.combine import Information, combine, response_modes
 from reduce.covariance import DiagonalLowRank, factor_basis
 from reduce.fast_posterior import WeightedPosterior, carried_over, fast_posterior, prior_bank
+from reduce.foreground.galaxy_ionosphere import GalaxyIonosphere
 from reduce.foreground.log_polynomial import LogPolynomial
 from reduce.foreground.power_series import PowerSeries
 from reduce.foreground.protocol import Family
@@ -65,6 +66,8 @@ def family_from(settings: Foreground, frequency_mhz: FloatArray) -> Family:
     low, high = float(frequency_mhz[0]), float(frequency_mhz[-1])
     if settings.family == "log-polynomial":
         return LogPolynomial(settings.terms, low, high)
+    if settings.family == "galaxy-ionosphere":
+        return GalaxyIonosphere(settings.terms, settings.index, low, high)
     return PowerSeries(settings.terms, settings.index, float(np.sqrt(low * high)), low, high)
 
 

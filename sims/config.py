@@ -101,9 +101,15 @@ class Run(Section):
 class Foreground(Section):
     """``[foreground]``: the smooth family taken away from each bin, and how many terms of it."""
 
-    family: Literal["log-polynomial", "power-series"]
+    family: Literal["log-polynomial", "power-series", "galaxy-ionosphere"]
     terms: int = Field(ge=1, le=20)
     index: float = Field(default=2.5, ge=1.0, le=4.0)
+
+    @model_validator(mode="after")
+    def _enough(self) -> Self:
+        if self.family == "galaxy-ionosphere" and self.terms < 3:
+            raise ValueError(f"terms must be at least 3 here, two of them the ionosphere's (got {self.terms})")
+        return self
 
 
 class PointPrior(Section):

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
+from reduce.foreground.galaxy_ionosphere import GalaxyIonosphere
 from reduce.foreground.log_polynomial import LogPolynomial
 from reduce.foreground.power_series import PowerSeries
 from reduce.foreground.protocol import Family
@@ -15,6 +16,7 @@ FREQUENCY_MHZ = np.linspace(40.0, 120.0, 161)
 FAMILIES: list[tuple[Family, NDArray[np.float64]]] = [
     (LogPolynomial(5, 40.0, 120.0), np.array([7.5, -1.4, 0.02, 0.005, -0.001])),
     (PowerSeries(5, 2.5, 70.0, 40.0, 120.0), np.array([2000.0, 20.0, -5.0, 1.0, 0.3])),
+    (GalaxyIonosphere(6, 2.55, 40.0, 120.0), np.array([-2000.0, 20.0, -5.0, 1.0, 0.3, 0.02])),
 ]
 
 
@@ -71,6 +73,25 @@ def test_power_series_is_its_formula() -> None:
     found = family.start(FREQUENCY_MHZ, temperature_k, np.ones(161))
     np.testing.assert_allclose(family.evaluate(FREQUENCY_MHZ, found), temperature_k, rtol=1e-13)  # rounding
     np.testing.assert_allclose(family.powers(found), wanted, rtol=1e-9)  # rounding times the condition of the powers
+
+
+def test_galaxy_and_ionosphere_is_its_formula() -> None:
+    family = GalaxyIonosphere(5, 2.5, 40.0, 120.0)
+    wanted = np.array([1800.0, -90.0, 12.0, -7.0, 4.0])
+    ratio = FREQUENCY_MHZ / np.sqrt(40.0 * 120.0)
+    galaxy = ratio**-2.5 * sum(b * np.log(ratio) ** k for k, b in enumerate(wanted[:3]))
+    temperature_k = galaxy + wanted[3] * ratio**-4.5 + wanted[4] * ratio**-2
+    found = family.start(FREQUENCY_MHZ, temperature_k, np.ones(161))
+    np.testing.assert_allclose(family.evaluate(FREQUENCY_MHZ, found), temperature_k, rtol=1e-13)  # rounding
+    np.testing.assert_allclose(family.expansion(found), wanted, rtol=1e-8)  # rounding times the condition of the terms
+
+
+def test_galaxy_and_ionosphere_is_conditioned_and_needs_a_galaxy() -> None:
+    family = GalaxyIonosphere(8, 2.5, 40.0, 120.0)
+    columns = family.basis(FREQUENCY_MHZ, np.zeros(8)) / FREQUENCY_MHZ[:, None] ** -2.5
+    assert scaled_condition(columns) < 20.0  # orthonormal evenly in ln f, here weighed evenly in f
+    with pytest.raises(InputError, match="two belong to the ionosphere"):
+        GalaxyIonosphere(2, 2.5, 40.0, 120.0)
 
 
 def scaled_condition(columns: NDArray[np.float64]) -> float:

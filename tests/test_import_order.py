@@ -91,6 +91,7 @@ ORDER = (
     "reduce.foreground.protocol",
     "reduce.foreground.log_polynomial",
     "reduce.foreground.power_series",
+    "reduce.foreground.galaxy_ionosphere",
     "reduce.subtract",
     "reduce.combine",
     "reduce.trough_model",
