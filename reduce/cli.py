@@ -141,6 +141,25 @@ def sky(
 
 
 @app.command()
+def beam(
+    config: ConfigFile,
+    out: Annotated[
+        Path | None, typer.Option("--out", metavar="DIR", help="Folder for page and plots; none: print only.")
+    ] = None,
+    update: Update = False,
+) -> None:
+    """Judge the beam: gain, losses, chromaticity.
+
+    Prints what the antenna is over the band, and with --out writes beam.txt, beam_cuts.png, beam_quality.png,
+    beam_change.png and beam_residual.png. Files already there are refused without --update.
+    """
+    from reduce.report.beam_page import report_beam  # noqa: PLC0415
+
+    with _complaints():
+        typer.echo(report_beam(config, out, update=update))
+
+
+@app.command()
 def new(
     folder: Annotated[Path, typer.Argument(metavar="DIR", help="Folder to begin in.", show_default=False)],
 ) -> None:

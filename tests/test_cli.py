@@ -16,7 +16,7 @@ from reduce import pipeline, preview, starter
 from reduce.cli import EXIT_FAILED, EXIT_INPUT, app
 from sims.config_load import load_config
 
-COMMANDS = ("run", "fit", "check", "new", "timeline")
+COMMANDS = ("run", "fit", "check", "new", "timeline", "sky", "beam")
 
 
 def call(*words: str | Path) -> Any:

@@ -51,7 +51,7 @@ class GalaxyIonosphere:
         problems = []
         if self.terms <= IONOSPHERE_TERMS:
             problems.append(
-                f"galaxy and ionosphere: got terms = {self.terms}; two belong to the ionosphere, so 3 or more are needed"
+                f"galaxy and ionosphere: got terms = {self.terms}; two belong to the ionosphere: 3 at least"
             )
         if not np.isfinite(self.index):
             problems.append(f"galaxy and ionosphere: got index = {self.index}; allowed is any finite number")
