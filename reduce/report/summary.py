@@ -124,7 +124,16 @@ def _fit(products: Products, config: FitConfig) -> list[str]:
     names = attribute_list(products.dataset("spectra.nc"), "mode_names")
     surviving = float(numbers["signal_surviving_fraction"])
     about = f" ({', '.join(str(name) for name in names)})" if names else ""
+    corrected = []
+    if "chromaticity_factor" in products.dataset("spectra.nc"):
+        factor = products.dataset("spectra.nc")["chromaticity_factor"].values
+        error = products.dataset("spectra.nc")["chromaticity_error"].values
+        corrected = [
+            f"chromaticity of the beam divided out first: factors {factor.min():.4f} to {factor.max():.4f}, known to "
+            f"{error.max():.1e}"
+        ]
     return [
+        *corrected,
         f"{config.foreground.family}, {terms} terms a bin without priors; condition number "
         f"{float(numbers['foreground_condition_number']):.3g}",
         f"covariance: noise and {modes} systematic modes{about}",
