@@ -22,6 +22,8 @@ from numpy.typing import NDArray
 from reduce.covariance import DiagonalLowRank, factor_basis
 from sims.errors import InputError, raise_if_any
 
+LARGEST_RESPONSE = 1.5  # a share of the sky, at most 1, times a gain near 1
+
 
 @dataclass(frozen=True, eq=False)
 class Information:
@@ -212,12 +214,12 @@ def signal_design(
         problems.append(f"basis: got shape {nuisance.shape}; allowed is [row, column] with {covariance.rows} rows")
     elif not np.isfinite(nuisance).all():
         problems.append("basis: not all values finite; allowed are kelvin for each unit of a coefficient")
-    outside = mask & ~((response >= 0) & (response <= 1 + 1e-6))  # averaging weights may round a whole sky above one
+    outside = mask & ~((response >= 0) & (response <= LARGEST_RESPONSE))
     if outside.any():
         numbers = np.flatnonzero(outside.any(axis=1)).tolist()
         problems.append(
-            f"signal_response: {outside.sum()} values outside 0 to 1 in bins {numbers}, first "
-            f"{response[outside][0]}; allowed is the share of a signal filling the sky, 0 to 1"
+            f"signal_response: {outside.sum()} values outside 0 to {LARGEST_RESPONSE:g} in bins {numbers}, first "
+            f"{response[outside][0]}; allowed is the share of a signal filling the sky, times the receiver's gain"
         )
     raise_if_any(problems)
 

@@ -110,6 +110,11 @@ def fast_posterior(
     power = 0.0
     while power < 1.0:
         step = _next_step(value, 1.0 - power)
+        if not step > 0.0:
+            raise RuntimeError(
+                "fast posterior: the likelihood is too steep over the prior, or not finite: the stated noise is too "
+                f"small, or a signal is not finite (reached power {power:.3g} of 1)"
+            )
         power = 1.0 if step == 1.0 - power else power + step
         chosen = _resampled(_normalised(step * value), rng)
         draws, value = draws[chosen], value[chosen]

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from reduce.binning import bin_of_each_sample, mean_by_bin
 from sims.campaign import geometry_like, simulate
 from sims.config import Config
-from sims.draws import leaf_value, with_leaves
+from sims.draws import correlation_root, leaf_value, with_leaves
 from sims.errors import InputError
 from sims.frequency import ChannelGrid, channel_grid
 from sims.knowledge import Known
@@ -30,6 +30,7 @@ from sims.vantage import survey_geometry
 FloatArray = NDArray[np.float64]
 
 SAMPLES_PER_BIN = 8
+RATIO_TERMS = 6
 ENGINE_SECTIONS = ("sky", "beam", "vantage", "surface")
 
 
@@ -65,7 +66,9 @@ def thinned(geometry: xr.Dataset, config: Config) -> xr.Dataset:
     return geometry.isel(time=np.sort(np.concatenate(kept)))
 
 
-def knowledge_modes(config: Config, advance: Callable[[int], None]) -> KnowledgeModes:
+def knowledge_modes(
+    config: Config, advance: Callable[[int], None], measured_k: FloatArray | None = None
+) -> KnowledgeModes:
     """Modes for every leaf of ``[knowledge]``.
 
     Parameters
@@ -74,11 +77,15 @@ def knowledge_modes(config: Config, advance: Callable[[int], None]) -> Knowledge
         Nominal configuration.
     advance : callable
         Told the number of engine runs done; `engine_runs` in all.
+    measured_k : ndarray[bin, channel], optional
+        The binned spectra themselves, K, NaN where there are none: errors of the receiver act on
+        them, and the few samples are brought to their level, smoothly in frequency, so that
+        none of their noise enters a mode.
 
     Returns
     -------
     KnowledgeModes
-        In the order of the table.
+        In the order of the table; correlated leaves mixed, so that the modes are independent.
 
     Raises
     ------
@@ -90,6 +97,10 @@ def knowledge_modes(config: Config, advance: Callable[[int], None]) -> Knowledge
     sky = sky_from(config.sky)
     nominal = simulate(config, sky, geometry, grid, _quiet)
     advance(1)
+    level_of_all = None
+    if measured_k is not None:
+        thin_k = mean_by_bin(nominal.antenna_temperature_k, geometry, config.bins)
+        level_of_all = smooth_ratio(measured_k, thin_k, grid.centre_mhz)
     names, temperatures, responses = [], [], []
     for leaf in config.knowledge.leaves:
         value = leaf_value(config, leaf.path)
@@ -99,11 +110,13 @@ def knowledge_modes(config: Config, advance: Callable[[int], None]) -> Knowledge
             moved = _moved(config, leaf.path, value, sign * sd)
             reached.append(leaf_value(moved, leaf.path))
             average = nominal
+            level = level_of_all
             if leaf.path.split(".")[0] in ENGINE_SECTIONS:
                 other_sky = moved_sky(sky, config.sky, moved.sky)
                 average = simulate(moved, other_sky, geometry_like(moved, geometry, config), grid, _quiet)
                 advance(1)
-            pair.append(_binned(moved, average, geometry, grid))
+                level = None
+            pair.append(_binned(moved, average, geometry, grid, level))
         if reached[1] == reached[0]:
             raise InputError(
                 f"knowledge.{leaf.path}: {value} can be moved by its error of {sd:g} neither up nor down within "
@@ -113,12 +126,43 @@ def knowledge_modes(config: Config, advance: Callable[[int], None]) -> Knowledge
         names.append(leaf.path)
         temperatures.append((high_k - low_k) * sd / (reached[1] - reached[0]))
         responses.append((high_w - low_w) * sd / (reached[1] - reached[0]))
-    shape = (0, config.bins.count, grid.count)
+    shape = (len(names), config.bins.count, grid.count)
+    root = correlation_root(config.knowledge)
+    mixed = {path for group in config.knowledge.correlated for path in group.paths}
     return KnowledgeModes(
-        names=tuple(names),
-        temperature_k=np.stack(temperatures) if names else np.zeros(shape),
-        response=np.stack(responses) if names else np.zeros(shape),
+        names=tuple(f"{name} (mixed)" if name in mixed else name for name in names),
+        temperature_k=np.einsum("mj,mbc->jbc", root, np.array(temperatures).reshape(shape)),
+        response=np.einsum("mj,mbc->jbc", root, np.array(responses).reshape(shape)),
     )
+
+
+def smooth_ratio(measured_k: FloatArray, model_k: FloatArray, frequency_mhz: FloatArray) -> FloatArray:
+    """Ratio of two sets of spectra as a smooth function of frequency.
+
+    Parameters
+    ----------
+    measured_k, model_k : ndarray[bin, channel]
+        Spectra, K; not finite or not positive where not to be used.
+    frequency_mhz : ndarray[channel]
+        Frequency, MHz.
+
+    Returns
+    -------
+    ndarray[bin, channel]
+        exp of a polynomial of `RATIO_TERMS` terms in ln f fitted to the logarithm of the
+        ratio; 1 in a bin with too few channels for it.
+    """
+    x = np.log(frequency_mhz)
+    x = 2.0 * (x - x[0]) / (x[-1] - x[0]) - 1.0
+    ratio = np.ones_like(model_k)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        usable = np.isfinite(measured_k / model_k) & (measured_k / model_k > 0.0)
+    for row, use in enumerate(usable):
+        if use.sum() > RATIO_TERMS:
+            logarithm = np.log(measured_k[row, use] / model_k[row, use])
+            coefficients = np.polynomial.chebyshev.chebfit(x[use], logarithm, RATIO_TERMS - 1)
+            ratio[row] = np.exp(np.polynomial.chebyshev.chebval(x, coefficients))
+    return ratio
 
 
 def _error(leaf: Known, nominal: float) -> float:
@@ -136,11 +180,13 @@ def _moved(config: Config, path: str, value: float, step: float) -> Config:
 
 
 def _binned(
-    config: Config, average: SkyAverage, geometry: xr.Dataset, grid: ChannelGrid
+    config: Config, average: SkyAverage, geometry: xr.Dataset, grid: ChannelGrid, level: FloatArray | None
 ) -> tuple[FloatArray, FloatArray]:
-    received = received_k(average.antenna_temperature_k, grid.centre_mhz, config.receiver)
-    response = average.signal_response * gain(grid.centre_mhz, config.receiver)
-    return mean_by_bin(received, geometry, config.bins), mean_by_bin(response, geometry, config.bins)
+    antenna_k = mean_by_bin(average.antenna_temperature_k, geometry, config.bins)
+    if level is not None:
+        antenna_k = level * antenna_k
+    response = mean_by_bin(average.signal_response, geometry, config.bins) * gain(grid.centre_mhz, config.receiver)
+    return received_k(antenna_k, grid.centre_mhz, config.receiver), response
 
 
 def _quiet(samples: int) -> None:

@@ -42,7 +42,7 @@ def observe_campaign(products: Products, config: FitConfig, tools: Tools) -> Mad
     tools.note(_engine_line(observed.reached.nodes, observed.reached.error_k, observed.reached.evaluations))
     spectra = bin_recording(observed.recording, config.bins)
     with tools.progress("what knowledge allows", engine_runs(config)) as advance:
-        modes = knowledge_modes(config, advance)
+        modes = knowledge_modes(config, advance, spectra["antenna_temperature_k"].values)
     if modes.names:
         spectra = spectra.assign(
             systematic_modes=(("mode", "bin", "channel"), modes.temperature_k),

@@ -34,6 +34,7 @@ THINNING = 4
 PROGRESS_STEPS = 100
 R_HAT_LIMIT = 1.01
 EFFECTIVE_SIZE_LIMIT = 400
+UNCONSTRAINED = 0.9  # of the width of the prior
 EDGE_MARGIN = 0.05
 EDGE_MASS = 0.025
 COLD_LIMIT = 0.01
@@ -228,8 +229,19 @@ def _flags(
             f"no trough of this shape fits: chi-squared {fit['chi_squared']:.1f} of {fit['degrees_of_freedom']:.0f} at "
             f"the best of them (chance {fit['probability']:.1g}); the stated errors are then too small"
         )
+    if (
+        fit["degrees_of_freedom"] > 0
+        and stats.chi2.cdf(fit["chi_squared"], fit["degrees_of_freedom"]) < MISFIT_PROBABILITY
+    ):
+        flags.append(
+            f"chi-squared {fit['chi_squared']:.1f} of {fit['degrees_of_freedom']:.0f} is too small to be chance: the "
+            "stated noise is too large, or in another unit"
+        )
     width = model.upper - model.lower
     for number, name in enumerate(NAMES):
+        if np.std(draws[:, number]) > UNCONSTRAINED * width[number] / np.sqrt(12.0):
+            flags.append(f"{name} is not constrained: its posterior is as wide as its prior")
+            continue
         below = np.mean(draws[:, number] < model.lower[number] + EDGE_MARGIN * width[number])
         above = np.mean(draws[:, number] > model.upper[number] - EDGE_MARGIN * width[number])
         for side, mass in (("lower", below), ("upper", above)):

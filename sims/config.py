@@ -328,6 +328,16 @@ def _channels_and_correction(channels: Channels, correction: Correction) -> list
     ]
 
 
+def _channels_and_receiver(channels: Channels, receiver: Receiver) -> list[str]:
+    width_mhz = (channels.stop_mhz - channels.start_mhz) / channels.count
+    if receiver.ripple_period_mhz >= 2.0 * width_mhz:
+        return []
+    return [
+        f"receiver.ripple_period, {receiver.ripple_period_mhz:g} MHz, is shorter than two channels of {width_mhz:g} "
+        "MHz: it would be aliased"
+    ]
+
+
 def _run_and_correction(run: Run, correction: Correction) -> list[str]:
     if correction.beam == "true" and run.truth != "drawn":
         return ['correction.beam = "true" needs run.truth = "drawn": with a nominal truth both beams are the same']
@@ -351,6 +361,7 @@ _JUDGES: tuple[tuple[tuple[str, ...], Callable[..., list[str]]], ...] = (
     (("channels", "turning_points"), _channels_and_turning_points),
     (("channels", "signal"), _channels_and_signal),
     (("channels", "foreground"), _channels_and_foreground),
+    (("channels", "receiver"), _channels_and_receiver),
     (("channels", "correction"), _channels_and_correction),
     (("run", "correction"), _run_and_correction),
     (("beam",), _plane_below_wire),

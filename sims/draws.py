@@ -10,13 +10,14 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 from pydantic import ValidationError
 from scipy import stats
 
 from sims.config import Config
 from sims.config_paths import value_at
 from sims.errors import InputError
-from sims.knowledge import Known
+from sims.knowledge import Knowledge, Known
 from sims.streams import stream
 
 
@@ -102,14 +103,23 @@ def draw(config: Config, name: str, index: int = 0) -> Draw:
     """
     rng = stream(config.run.seed, f"{name}/leaves", index)
     leaves = config.knowledge.leaves
-    scores = rng.standard_normal(len(leaves))
-    place = {leaf.path: number for number, leaf in enumerate(leaves)}
-    for group in config.knowledge.correlated:
+    scores = correlation_root(config.knowledge) @ rng.standard_normal(len(leaves))
+    drawn = {
+        leaf.path: _from_score(leaf, leaf_value(config, leaf.path), float(score))
+        for leaf, score in zip(leaves, scores, strict=True)
+    }
+    return Draw(config=with_leaves(config, drawn), values=drawn, index=index)
+
+
+def correlation_root(knowledge: Knowledge) -> NDArray[np.float64]:
+    """Matrix L with L L^T the correlation of the leaves: ndarray[leaf, leaf], from independent scores to theirs."""
+    place = {leaf.path: number for number, leaf in enumerate(knowledge.leaves)}
+    root = np.eye(len(place))
+    for group in knowledge.correlated:
         rows = [place[path] for path in group.paths]
         values, vectors = np.linalg.eigh(np.array(group.correlation))
-        scores[rows] = (vectors * np.sqrt(np.clip(values, 0.0, None))) @ scores[rows]
-    drawn = {leaf.path: _from_score(leaf, leaf_value(config, leaf.path), scores[place[leaf.path]]) for leaf in leaves}
-    return Draw(config=with_leaves(config, drawn), values=drawn, index=index)
+        root[np.ix_(rows, rows)] = vectors * np.sqrt(np.clip(values, 0.0, None))
+    return root
 
 
 def _from_score(leaf: Known, nominal: float, score: float) -> float:

@@ -20,6 +20,7 @@ from sims.beam import beam_from
 from sims.campaign import engine_passes, observe, signal_to_inject_k, true_draw
 from sims.config import Config
 from sims.frequency import channel_grid
+from sims.receiver import gain
 from sims.schema import RECORDING, check
 from sims.sky_average import evaluate
 
@@ -130,6 +131,20 @@ def test_recording_holds_no_truth_and_the_nominal_response() -> None:
     true = mean_by_bin(observed.truth["signal_response"].values, observed.recording, config.bins)
     # A tilt of a degree and a millimetre of length change the response, but by little.
     assert 0.0 < np.abs(believed - true).max() < 0.02
+    # What is believed is the nominal response and gain to rounding, whatever is true.
+    nominal = observe(config.model_copy(update={"run": config.run.model_copy(update={"truth": "nominal"})}), quiet)
+    expected = nominal.truth["signal_response"].values * gain(nominal.truth["frequency_mhz"].values, config.receiver)
+    assert observed.recording["signal_response"].values == pytest.approx(expected, abs=1e-8)
+
+
+def test_stated_variance_is_the_radiometer_equation_with_the_duty_cycle() -> None:
+    config = small_config()
+    recording = observe(config, quiet).recording
+    on_antenna_s = recording["integration_s"].values * config.observation.duty_cycle
+    system_k = recording["antenna_temperature_k"].values + config.receiver.temperature_k
+    expected = system_k**2 / (recording["width_mhz"].values * 1e6 * on_antenna_s[:, None])
+    assert recording["noise_variance_k2"].values == pytest.approx(expected, rel=1e-12)
+    assert float(recording["integration_s"].sum()) == pytest.approx(800 * 3600.0)
 
 
 def test_same_seed_same_recording_other_seed_another() -> None:

@@ -355,7 +355,7 @@ def test_bad_input_is_refused() -> None:
     common = {"covariance": fit.covariance, "basis": fit.basis, "good": case.good}
     percent = case.response.copy()
     percent[1] *= 100.0
-    with pytest.raises(InputError, match=r"outside 0 to 1 in bins \[1\]"):
+    with pytest.raises(InputError, match=r"outside 0 to 1.5 in bins \[1\]"):
         signal_design(**common, signal_response=percent)  # type: ignore[arg-type]
     with pytest.raises(InputError) as caught:
         signal_design(

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from scipy import stats
 
 from reduce.binning import bin_of_each_sample, mean_by_bin
-from reduce.knowledge_modes import SAMPLES_PER_BIN, KnowledgeModes, engine_runs, knowledge_modes, thinned
+from reduce.knowledge_modes import SAMPLES_PER_BIN, KnowledgeModes, engine_runs, knowledge_modes, smooth_ratio, thinned
 from sims.campaign import simulate
 from sims.config import Config
 from sims.constants import CMB_TEMPERATURE_K, rayleigh_jeans_k
@@ -221,6 +221,48 @@ def test_gain_is_part_of_the_response(tmp_path: Path) -> None:
     case = Case(config)
     _, response = case.mode("receiver.scale")
     np.testing.assert_allclose(response, 0.01 * case.response * gain(case.grid.centre_mhz, config.receiver), rtol=1e-12)
+
+
+def test_receiver_errors_act_on_the_spectra_themselves_without_their_noise(tmp_path: Path) -> None:
+    text = 'receiver.scale = { distribution = "normal", sd = 0.01 }'
+    config = campaign(tmp_path, False, "[knowledge]", text)
+    case = Case(config)
+    level = np.exp(0.1 - 0.05 * np.log(case.grid.centre_mhz / 70.0))
+    noisy = level * case.temperature_k * (1 + 1e-4 * np.random.default_rng(1).standard_normal(case.temperature_k.shape))
+    noisy[:, 3] = np.nan
+    modes = knowledge_modes(config, lambda runs: None, noisy)
+    # Six terms of sixteen channels keep sqrt(6/16) of noise of 1e-4 as a smooth curve, which a foreground absorbs.
+    np.testing.assert_allclose(modes.temperature_k[0], 0.01 * level * case.temperature_k, rtol=5e-4)
+
+
+def test_smooth_ratio_keeps_noise_out() -> None:
+    frequency = np.linspace(40.0, 120.0, 256)
+    model = np.tile(1000.0 * (frequency / 70.0) ** -2.5, (3, 1))
+    noise = 1e-5 * np.random.default_rng(3).standard_normal((3, 256))
+    wanted = np.exp(0.02 * np.log(frequency / 70.0) ** 2)
+    ratio = smooth_ratio(model * wanted * (1 + noise), model, frequency)
+    left = ratio / wanted - 1
+    # Six of 256 degrees of freedom pass: 0.15 of the noise, and none of it from channel to channel.
+    assert np.std(left) < 0.3e-5
+    assert np.abs(np.diff(left, axis=1)).max() < 1e-6
+
+
+@pytest.mark.parametrize("rho", [0.9, -0.99])
+def test_correlated_leaves_make_the_covariance_of_their_draws(tmp_path: Path, rho: float) -> None:
+    text = (
+        'beam.efficiency = { distribution = "normal", sd = 0.003 }\n'
+        'receiver.scale = { distribution = "normal", sd = 0.01 }\n'
+        '[[knowledge.correlated]]\npaths = ["beam.efficiency", "receiver.scale"]\n'
+        f"correlation = [[1.0, {rho}], [{rho}, 1.0]]\n"
+    )
+    config = campaign(tmp_path, False, "[knowledge]", text)
+    alone = campaign(tmp_path, False, "[knowledge]", text.split("[[")[0])
+    one, two = knowledge_modes(alone, lambda runs: None).temperature_k
+    mixed = knowledge_modes(config, lambda runs: None)
+    variance = (mixed.temperature_k**2).sum(axis=0)
+    # The variance of a sum of two correlated errors.
+    np.testing.assert_allclose(variance, one**2 + two**2 + 2 * rho * one * two, rtol=1e-9)
+    assert mixed.names == ("beam.efficiency (mixed)", "receiver.scale (mixed)")
 
 
 def test_standard_deviation_of_a_truncated_normal_is_its_own() -> None:

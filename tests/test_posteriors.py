@@ -156,6 +156,31 @@ def test_a_shape_that_no_trough_has_is_flagged() -> None:
     )
 
 
+def test_noise_that_is_stated_far_too_large_is_flagged() -> None:
+    model = trough_model(PRIOR, FREQUENCY, WIDTH)
+    noise = 0.001 * np.random.default_rng(4).standard_normal(80)
+    information = information_of(np.eye(80) / 0.03, (model.signal_k(TRUTH) + noise) / 0.03)
+    posterior = sample_posterior(information, model, PRIOR, np.random.default_rng(1), lambda done: None)
+    assert any("is too small to be chance" in flag for flag in summarise(posterior, model, information)["flags"])
+
+
+def test_what_data_do_not_constrain_is_said_once() -> None:
+    model = trough_model(PRIOR, FREQUENCY, WIDTH)
+    blind = white(model, 30.0, 5)
+    posterior = sample_posterior(blind, model, PRIOR, np.random.default_rng(1), lambda done: None)
+    flags = summarise(posterior, model, blind)["flags"]
+    assert sum("temperature_b_mk" in flag for flag in flags) == 1
+    assert "temperature_b_mk is not constrained: its posterior is as wide as its prior" in flags
+
+
+def test_likelihood_too_steep_to_follow_is_refused() -> None:
+    model = trough_model(PRIOR, FREQUENCY, WIDTH)
+    rng = np.random.default_rng(6)
+    broken = information_of(np.eye(80) / 0.01, np.full(80, np.nan))
+    with pytest.raises(RuntimeError, match="too steep over the prior, or not finite"):
+        fast_posterior(broken, model, prior_bank(model, rng), rng)
+
+
 def test_summary_holds_medians_intervals_and_the_whole_covariance() -> None:
     model = trough_model(PRIOR, FREQUENCY, WIDTH)
     information = white(model, 0.005, 2)
