@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 from functools import lru_cache
+from pathlib import Path
 
 import numpy as np
 
@@ -67,7 +68,16 @@ def read_far_field(source: Source) -> FarField:
         With every fault of the files, each with its place.
     """
     files = (source.file,) if isinstance(source, NetcdfSource) else source.files
-    return _read(source, tuple((path.stat().st_mtime_ns, path.stat().st_size) for path in files))
+    return _read(source, tuple(_stamp(path) for path in files))
+
+
+def _stamp(path: Path) -> tuple[int, int]:
+    """When a file changed, and its size; of a file that is gone the reader tells."""
+    try:
+        found = path.stat()
+    except OSError:
+        return 0, 0
+    return found.st_mtime_ns, found.st_size
 
 
 @lru_cache(maxsize=_KEPT_TABLES)

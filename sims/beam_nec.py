@@ -11,7 +11,7 @@ from __future__ import annotations
 
 import re
 from array import array
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, field, fields
 from math import isfinite
 from pathlib import Path
@@ -96,25 +96,30 @@ def read_nec_files(source: NecSource) -> FarField:
     raise_if_any(problems)
     notes: list[str] = []
     cells: dict[float, list[_Cells]] = {}
+    alone = [pattern.where for pattern in patterns if pattern.free_space]
     for pattern in patterns:
         assert pattern.frequency_mhz is not None
         cells.setdefault(pattern.frequency_mhz, []).append(_scaled(pattern, problems, notes))
+        pattern.rows = array("d")  # memory for the next
     raise_if_any(problems)
     name = ", ".join(str(path) for path in source.files)
     table = _on_a_grid(cells, name, tuple(notes))
-    alone = [pattern.where for pattern in patterns if pattern.free_space]
     if table.upper_half and alone:
         raise InputError(f"{alone[0]}: an antenna in FREE SPACE radiates below theta 90 deg too, where the table ends")
     return table
 
 
 def _patterns(path: Path, problems: list[str]) -> list[_Pattern]:
-    """The tables of a file."""
+    """The tables of a file, read line by line: print-outs of many frequencies are large."""
     try:
-        lines = path.read_text(encoding="utf-8", errors="replace").splitlines()
+        with path.open(encoding="utf-8", errors="replace") as lines:
+            return _tables(path, lines, problems)
     except OSError as error:
         problems.append(f"{path}: cannot be read as a text file ({error})")
         return []
+
+
+def _tables(path: Path, lines: Iterable[str], problems: list[str]) -> list[_Pattern]:
     found: list[_Pattern] = []
     frequency: float | None = None
     power: float | None = None
@@ -147,7 +152,7 @@ def _patterns(path: Path, problems: list[str]) -> list[_Pattern]:
     return found
 
 
-def _spoken(lines: list[str]) -> Iterator[tuple[int, str]]:
+def _spoken(lines: Iterable[str]) -> Iterator[tuple[int, str]]:
     """Lines that say something, with their numbers."""
     for number, line in enumerate(lines, start=1):
         text = line.strip()

@@ -16,6 +16,7 @@ from sims.far_field import FarField, far_field
 
 FloatArray = NDArray[np.float64]
 _AXES = {"frequency": "MHz", "theta": "deg", "phi": "deg"}
+_PLURALS = {"degrees": "deg", "radians": "rad"}  # as the CF conventions spell them, and astropy does not
 
 
 def read_netcdf_file(source: NetcdfSource) -> FarField:
@@ -56,6 +57,8 @@ def _far_field(dataset: xr.Dataset, source: NetcdfSource) -> FarField:
         if name in dataset.data_vars and set(dataset[name].dims) != set(_AXES):
             got = ", ".join(map(str, dataset[name].dims))
             problems.append(f"{source.file}: {name}: dims {got}; needed are {', '.join(_AXES)}, in any order")
+        if name in dataset.data_vars:
+            problems += _value_problems(dataset, name, source)
     raise_if_any(problems)
     arrays = [np.asarray(dataset[name].transpose(*_AXES).values, dtype=np.float64) for name in names]
     fields = None
@@ -69,12 +72,33 @@ def _far_field(dataset: xr.Dataset, source: NetcdfSource) -> FarField:
     )  # fmt: skip
 
 
+def _value_problems(dataset: xr.Dataset, name: str, source: NetcdfSource) -> list[str]:
+    """A kind of number, or a unit in the file, other than what is declared."""
+    problems = []
+    kind, stated = dataset[name].dtype, str(dataset[name].attrs.get("units", "")).strip().lower()
+    if kind.kind not in "fiu":
+        problems.append(
+            f"{source.file}: {name}: holds {kind}; real numbers are needed, of complex fields both parts, each by "
+            "itself (field_variables)"
+        )
+    unit = {"db": "dBi", "dbi": "dBi", "1": "linear"}.get(stated, source.unit)
+    if source.variable is not None and unit != source.unit:
+        problems.append(f"{source.file}: {name}: units {stated!r} in the file, but declared is unit = {source.unit!r}")
+    return problems
+
+
 def _axis(dataset: xr.Dataset, name: str, unit: str, source: NetcdfSource, problems: list[str]) -> FloatArray:
     """A coordinate in our unit; its own must be stated."""
     if name not in dataset.coords:
         problems.append(f"{source.file}: no coordinate {name!r}; needed are {', '.join(_AXES)}, each with units")
         return np.zeros(0)
+    if dataset[name].dims != (name,):
+        problems.append(
+            f"{source.file}: {name}: dims {', '.join(map(str, dataset[name].dims))}; needed is {name} alone"
+        )
+        return np.zeros(0)
     stated = str(dataset[name].attrs.get("units", ""))
+    stated = _PLURALS.get(stated, stated)
     try:
         factor = float(u.Unit(stated).to(u.Unit(unit))) if stated else None
     except (ValueError, u.UnitConversionError):

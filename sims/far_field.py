@@ -12,12 +12,14 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from sims.beam_smooth import frequency_spline
 from sims.beam_spline import angular_spline
 from sims.errors import InputError, raise_if_any
 
 FloatArray = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 ANGLE_TOLERANCE_DEG = 1e-4  # as solvers print angles
+TRIFLE = 1e-3  # of a step: what rounded radians miss a pole, or the end of the turn, by
 AGREEMENT = 1e-3  # of the largest power: what is given twice must agree to this
 _MOST_CELLS_NAMED = 5
 
@@ -45,7 +47,7 @@ class FarField:
     source : str
         The file or files, for messages.
     notes : tuple of str
-        What was put right on the way.
+        What was put right on the way, and gaps in frequency.
     """
 
     frequency_mhz: FloatArray
@@ -100,20 +102,22 @@ def far_field(
         a gap, or a frequency has no power. All problems together, each with its cell.
     """
     frequency = np.asarray(frequency_mhz, dtype=float)
-    theta, phi = np.asarray(theta_deg, dtype=float), np.mod(np.asarray(phi_deg, dtype=float), 360.0)
-    phi = np.where(360.0 - phi < ANGLE_TOLERANCE_DEG, 0.0, phi)
+    theta, phi = np.asarray(theta_deg, dtype=float), np.asarray(phi_deg, dtype=float)
+    problems = [f"{source}: {line}" for line in _turn_problems(phi)]
+    phi = np.mod(phi, 360.0, where=np.isfinite(phi), out=phi.copy())
+    phi = np.where(360.0 - phi < _trifle_deg(phi), 0.0, phi)
     if power.shape != (len(frequency), len(theta), len(phi)):
         raise InputError(
             f"{source}: power of shape {power.shape} for {len(frequency)} frequencies, {len(theta)} thetas and "
             f"{len(phi)} phis"
         )
-    problems = [f"{source}: {line}" for line in _axis_problems(frequency, theta, phi)]
+    problems += [f"{source}: {line}" for line in _axis_problems(frequency, theta)]
     problems += [f"{source}: {line}" for line in _cell_problems(frequency, theta, phi, power)]
     raise_if_any(problems)
     special = 90.0 * np.round(theta / 90.0)  # the poles and the horizon, where a solver's rounding misses them
-    theta = np.where(np.abs(theta - special) < ANGLE_TOLERANCE_DEG, special, theta)
+    theta = np.where(np.abs(theta - special) < _trifle_deg(theta), special, theta)
     table = _Table(frequency, theta, phi, power, fields, notes)
-    table = _sorted(table)
+    table = _gaps_noted(_sorted(table))
     problems = []
     table = _closed(table, source, problems)
     table = _one_pole(table, source, problems)
@@ -160,21 +164,29 @@ class _Table:
         return _Table(self.frequency_mhz, self.theta_deg, self.phi_deg, self.power, self.fields, (*self.notes, note))
 
 
-def _axis_problems(frequency: FloatArray, theta: FloatArray, phi: FloatArray) -> list[str]:
+def _turn_problems(phi: FloatArray) -> list[str]:
+    """Phis that are none, or run on over more than a turn, as of degrees taken for radians."""
+    finite = np.isfinite(phi)
+    if not finite.all():
+        return [f"phi must be finite, got {phi[~finite][0]:g} as number {int(finite.argmin()) + 1}"]
+    span = float(np.ptp(phi)) if len(phi) else 0.0
+    if span >= 360.0 + _trifle_deg(phi):
+        return [f"phi must stay within one turn, got {phi.min():.8g} to {phi.max():.8g} deg: is its unit right?"]
+    return []
+
+
+def _axis_problems(frequency: FloatArray, theta: FloatArray) -> list[str]:
     problems = []
     wrong = frequency[~(np.isfinite(frequency) & (frequency > 0.0))]
     if len(wrong):
         problems.append(f"frequencies must be finite and positive, got {wrong[:3].tolist()} MHz")
-    if not np.isfinite(phi).all():
-        problems.append(
-            f"phi must be finite, got {phi[~np.isfinite(phi)][0]:g} as number {np.argmin(np.isfinite(phi)) + 1}"
-        )
     twice = np.sort(frequency)[:-1][np.diff(np.sort(frequency)) == 0.0]
     if len(twice):
         problems.append(f"given twice: {', '.join(f'{value:g}' for value in np.unique(twice))} MHz")
-    outside = theta[~((theta >= -ANGLE_TOLERANCE_DEG) & (theta <= 180.0 + ANGLE_TOLERANCE_DEG))]
+    trifle = _trifle_deg(theta)
+    outside = theta[~((theta > -trifle) & (theta < 180.0 + trifle))]
     if len(outside):
-        problems.append(f"theta must lie within 0 to 180 deg, got {outside[0]:g}")
+        problems.append(f"theta must lie within 0 to 180 deg, got {outside[0]:.8g}")
     close = np.diff(np.sort(theta)) < ANGLE_TOLERANCE_DEG
     if close.any():
         problems.append(f"theta {np.sort(theta)[:-1][close][0]:g} deg is given twice")
@@ -204,9 +216,23 @@ def _sorted(table: _Table) -> _Table:
     return table
 
 
+def _trifle_deg(angle_deg: FloatArray) -> float:
+    """What two angles of an axis may differ by and be one."""
+    step = np.diff(np.unique(angle_deg[np.isfinite(angle_deg)]))
+    step = step[step > ANGLE_TOLERANCE_DEG]
+    return max(ANGLE_TOLERANCE_DEG, TRIFLE * float(np.median(step))) if len(step) else ANGLE_TOLERANCE_DEG
+
+
+def _gaps_noted(table: _Table) -> _Table:
+    """Frequencies that seem left out are no fault, since steps may be uneven, but are told."""
+    for low, high in frequency_spline(table.frequency_mhz, None).gaps_mhz:
+        table = table.noted(f"a gap in frequency: none between {low:g} and {high:g} MHz, joined by the spline")
+    return table
+
+
 def _closed(table: _Table, source: str, problems: list[str]) -> _Table:
     """The turn held once: directions that stand twice, as at 0 and 360 deg, must agree."""
-    repeat = np.flatnonzero(np.diff(table.phi_deg) < ANGLE_TOLERANCE_DEG) + 1
+    repeat = np.flatnonzero(np.diff(table.phi_deg) < _trifle_deg(table.phi_deg)) + 1
     if not len(repeat):
         return table
     apart = np.abs(table.power[:, :, repeat] - table.power[:, :, repeat - 1]).max() / table.power.max()

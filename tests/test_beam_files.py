@@ -168,6 +168,13 @@ def test_a_changed_file_is_read_again(tmp_path: Path) -> None:
     assert np.abs(after - before).max() > 0.01
 
 
+def test_a_file_that_is_gone_is_named(tmp_path: Path) -> None:
+    source = written(tmp_path, on_grid(DIPOLE.directivity))
+    source.file.unlink()
+    with pytest.raises(InputError, match=r"beam\.nc: cannot be read"):
+        antenna_from(file_beam(source))
+
+
 def test_an_even_sky_is_seen_through_a_table_as_it_is(tmp_path: Path) -> None:
     beam = grid_of(file_beam(written(tmp_path, on_grid(DIPOLE.directivity))))
     scene = moving_scene(EvenSky(16, 230.0, None), beam, 3)

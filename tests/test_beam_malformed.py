@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from pathlib import Path
 
+import h5netcdf
 import healpy as hp
 import numpy as np
 import pytest
@@ -37,6 +38,11 @@ def edited(number: int, line: str | None) -> str:
 TABLES: dict[str, tuple[str, str]] = {
     "word for a number": (edited(7, "50.0;0.0;15.0;strong"), r"line 7, column 4: 'strong' is not a number"),
     "comma for a point": (edited(9, "50.0;0.0;21.0;1,5"), r"line 9, column 4: '1,5' is not a number"),
+    "ten in Python only": (edited(7, "50.0;0.0;15.0;1_0"), r"line 7, column 4: '1_0' is not a number"),
+    "angles without a grid": (
+        "\n".join([LINES[0]] + [f"50;{180 * (n / 999) ** 0.5};{n * 222.49 % 360};1" for n in range(1000)]) + "\n",
+        r"1000 rows hold 1 frequencies, 1000 thetas and 1000 phis, whose grid has 1000000 cells",
+    ),
     "line cut short": (edited(12, "50.0;0.0"), r"line 12: 2 columns; column 3 is needed"),
     "row left out": (edited(5, None), r"1 of \d+ cells of the grid: 50 MHz, theta 0, phi 9 deg is missing"),
     "row twice": (TEXT + LINES[4] + "\n", r"1 of \d+ cells of the grid: 50 MHz, theta 0, phi 9 deg is given twice"),
@@ -119,6 +125,16 @@ NETCDFS: dict[str, tuple[Callable[[xr.Dataset], xr.Dataset], str]] = {
     "angle in metres": (with_units("theta", "m"), r"theta: units 'm'; a unit like deg is needed"),
     "another dimension": (lambda d: d.expand_dims(port=1), r"gain: dims port, frequency, theta, phi; needed are"),
     "frequency twice": (repeated_frequency, r"given twice: 70 MHz"),
+    "degrees called radians": (with_units("phi", "rad"), r"phi must stay within one turn, got 0 to 20454\.\d+ deg"),
+    "decibels called linear": (
+        with_units("gain", "dBi"),
+        r"gain: units 'dbi' in the file, but declared is unit = 'linear'",
+    ),
+    "words for numbers": (lambda d: d.assign(gain=d["gain"].astype("S8")), r"gain: holds .*; real numbers are needed"),
+    "angle over two dimensions": (
+        lambda d: d.drop_vars("theta").assign_coords(theta=(("theta", "phi"), POWER[0], {"units": "deg"})),
+        r"theta: dims theta, phi; needed is theta alone",
+    ),
     "not finite": (
         lambda d: d.where(d["phi"] != 9.0),
         r"power not finite in 183 of \d+ cells: 50 MHz, theta 0, phi 9: nan",
@@ -163,9 +179,35 @@ def test_malformed_maps(tmp_path: Path) -> None:
     with pytest.raises(InputError, match=r"holes\.fits: column 1: 2 pixels missing or not finite, first 5"):
         read_healpix_files(holes)
     hp.write_map(tmp_path / "negative.fits", np.linspace(-1, 1, 768), dtype=np.float64)
-    with pytest.raises(InputError, match=r"negative\.fits: column 1: negative power in 384 pixels"):
+    with pytest.raises(
+        InputError, match=r"negative\.fits: column 1: negative power in 384 pixels, first 0 in ring order"
+    ):
         read_healpix_files(holes.model_copy(update={"files": (tmp_path / "negative.fits",)}))
     rough = np.random.default_rng(1).random(768)
     hp.write_map(tmp_path / "rough.fits", rough, dtype=np.float64)
     with pytest.raises(InputError, match=r"rough\.fits: 50 MHz: harmonics to degree 12 miss"):
         read_healpix_files(holes.model_copy(update={"files": (tmp_path / "rough.fits",)}))
+
+
+def test_complex_numbers_are_not_halved(tmp_path: Path) -> None:
+    """What NumPy would do with a warning only: the real part would be a beam of its own."""
+    source = write_netcdf(tmp_path, POWER)
+    with h5netcdf.File(tmp_path / "complex.h5", "w", invalid_netcdf=True) as out:
+        with xr.open_dataset(source.file, engine="h5netcdf") as dataset:
+            for name in ("frequency", "theta", "phi"):
+                out.dimensions[name] = len(dataset[name])
+                axis = out.create_variable(name, (name,), float, data=dataset[name].values)
+                axis.attrs["units"] = dataset[name].attrs["units"]
+        out.create_variable("gain", ("frequency", "theta", "phi"), complex, data=POWER * np.exp(1j))
+    with pytest.raises(InputError, match=r"complex\.h5: gain: holds complex128; real numbers are needed"):
+        read_netcdf_file(source.model_copy(update={"file": tmp_path / "complex.h5"}))
+
+
+def test_half_a_hole_in_a_map_is_no_upper_half(tmp_path: Path) -> None:
+    """Pixels missing below the horizon beside others that are not: the map is a sphere with holes."""
+    values = np.ones(768)
+    values[700:] = hp.UNSEEN
+    hp.write_map(tmp_path / "holes.fits", values, dtype=np.float64)
+    source = HealpixSource(format="healpix", files=(tmp_path / "holes.fits",), frequencies_mhz=(50.0,), unit="linear")
+    with pytest.raises(InputError, match=r"holes\.fits: column 1: 68 pixels missing or not finite, first 700"):
+        read_healpix_files(source)

@@ -165,6 +165,18 @@ def test_frequencies_that_are_none(frequency: np.ndarray) -> None:
     assert f"frequencies must be finite and positive, got [{frequency[~np.isfinite(frequency)][0]}]" in told
 
 
+def test_phis_of_more_than_a_turn() -> None:
+    """Degrees taken for radians would else be a beam, of directions in disorder."""
+    told = problems_of(FREQUENCY, THETA, np.degrees(PHI), power_on())
+    assert "phi must stay within one turn, got 0 to 20282.706 deg: is its unit right?" in told
+
+
+def test_a_gap_in_frequency_is_told() -> None:
+    frequency = np.array([50.0, 52.0, 54.0, 62.0, 64.0])
+    table = far_field(frequency, THETA, PHI, power_on(frequency=frequency), "beam.txt")
+    assert "a gap in frequency: none between 54 and 62 MHz, joined by the spline" in table.notes
+
+
 def test_angles_that_are_none() -> None:
     theta, phi = THETA.copy(), PHI.copy()
     theta[4] = np.nan
