@@ -357,6 +357,12 @@ def test_bad_input_is_refused() -> None:
     percent[1] *= 100.0
     with pytest.raises(InputError, match=r"outside 0 to 1.5 in bins \[1\]"):
         signal_design(**common, signal_response=percent)  # type: ignore[arg-type]
+    # A lossless antenna on the ground behind a gain just above one is no error: twice the response, twice the root.
+    full = signal_design(**common, signal_response=np.full((2, 30), 0.501))  # type: ignore[arg-type]
+    above = signal_design(**common, signal_response=np.full((2, 30), 1.002))  # type: ignore[arg-type]
+    np.testing.assert_allclose(
+        above.R.T @ above.R, 4.0 * full.R.T @ full.R, rtol=1e-6, atol=1e-9 * np.abs(above.R).max() ** 2
+    )
     with pytest.raises(InputError) as caught:
         signal_design(
             covariance=fit.covariance, basis=fit.basis[:-1], signal_response=case.response, good=np.ones((2, 30), bool)
