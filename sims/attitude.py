@@ -131,7 +131,11 @@ def pointing_turns(elapsed_s: FloatArray, dwell_s: float, directions: int) -> ND
     -------
     ndarray[time]
     """
-    return np.asarray(np.floor(elapsed_s / dwell_s).astype(np.int64) % directions)
+    turns = elapsed_s / dwell_s
+    whole = np.round(turns)
+    # Seven steps of 0.7 s fall short of a dwell of 4.9 s by rounding alone: the next has its turn.
+    arrived = np.abs(turns - whole) <= 4.0 * np.finfo(float).eps * whole
+    return np.asarray(np.where(arrived, whole, np.floor(turns)).astype(np.int64) % directions)
 
 
 def attitude_from(z: FloatArray, x: FloatArray) -> FloatArray:

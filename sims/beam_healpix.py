@@ -80,7 +80,7 @@ def _columns(path: Path, source: HealpixSource, problems: list[str]) -> list[Flo
         with fits.open(path) as opened:
             table = next(unit for unit in opened if isinstance(unit, fits.BinTableHDU))
             header, columns = table.header, [np.asarray(table.data.field(n)).ravel() for n in range(len(table.columns))]
-    except (OSError, StopIteration, ValueError) as error:
+    except (OSError, StopIteration, TypeError, ValueError) as error:  # astropy's of a file cut short is a TypeError
         problems.append(f"{path}: cannot be read as FITS with a binary table ({error or 'none found'})")
         return []
     ordering: str = source.ordering
@@ -91,6 +91,9 @@ def _columns(path: Path, source: HealpixSource, problems: list[str]) -> list[Flo
                 f"{path}: header ORDERING is {header.get('ORDERING')!r}; declare ordering as ring or nested"
             )
             return []
+    if str(header.get("INDXSCHM", "")).upper() == "EXPLICIT":
+        problems.append(f"{path}: header INDXSCHM is 'EXPLICIT', pixels by number; maps of all pixels are needed")
+        return []
     found = []
     for number, values in enumerate(columns):
         if values.dtype.kind not in "fiu":
@@ -100,7 +103,11 @@ def _columns(path: Path, source: HealpixSource, problems: list[str]) -> list[Flo
         if not hp.isnpixok(len(data)):
             problems.append(f"{path}: column {number + 1}: {len(data)} pixels are no HEALPix map")
             continue
-        data[data == hp.UNSEEN] = np.nan
+        if ordering == "nested" and not hp.isnsideok(hp.npix2nside(len(data)), nest=True):
+            nside = hp.npix2nside(len(data))
+            problems.append(f"{path}: column {number + 1}: nside {nside} cannot be nested; a power of 2 is needed")
+            continue
+        data[hp.mask_bad(data)] = np.nan  # also as single precision rounds it
         if ordering == "nested":
             data = hp.reorder(data, n2r=True)
         found.append(_linear(data) if source.unit == "dBi" else data)

@@ -1,7 +1,6 @@
-"""Reader of the print-outs of NEC-2, the public-domain method-of-moments code (Burke and Poggio 1981).
+"""Reader of beams from print-outs of NEC-2 (Burke and Poggio 1981): fields on the scale of gain, on one grid.
 
-One of the readers behind `sims.beam_files`. A file holds one frequency or many; each table headed
-RADIATION PATTERNS belongs to the FREQUENCY, INPUT POWER and RANGE printed before it. The power
+One of the readers behind `sims.beam_files`; `sims.nec_printout` takes the files apart. The power
 comes from the columns of the field: the printed gain is rounded to 0.01 dB. NEC-2 prints a field
 far away without its factor exp(-jkr)/r, thus in volts, unless a range was asked for. Its angles
 and the phase exp(+j omega t) are those of `sims.beam_grid`.
@@ -9,12 +8,8 @@ and the phase exp(+j omega t) are those of `sims.beam_grid`.
 
 from __future__ import annotations
 
-import re
 from array import array
-from collections.abc import Iterable, Iterator
-from dataclasses import dataclass, field, fields
-from math import isfinite
-from pathlib import Path
+from dataclasses import dataclass, fields
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,40 +18,15 @@ from sims.config_beam import NecSource
 from sims.constants import FREE_SPACE_IMPEDANCE_OHM
 from sims.errors import InputError, raise_if_any
 from sims.far_field import FarField, far_field
+from sims.nec_printout import COLUMNS, NecPattern, nec_patterns
 
 FloatArray = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 GAIN_TOLERANCE_DB = 0.02  # the printed gain is rounded to 0.01 dB, the fields and the power to five digits
-_NUMBER = r"([-+]?(?:\d+\.?\d*|\.\d+)(?:[EeDd]?[-+]\d+)?)(?![\w.])"
-_FREQUENCY = re.compile(r"^FREQUENCY\s*[:=]\s*(\S+)\s*(\S*)", re.IGNORECASE)
-_INPUT_POWER = re.compile(r"^INPUT POWER\s*[:=]\s*(\S+)\s*(\S*)", re.IGNORECASE)
-_RANGE = re.compile(r"^RANGE\s*[:=]\s*(\S+)\s*(\S*)", re.IGNORECASE)
-_WHOLE_NUMBER = re.compile(rf"^{_NUMBER}$")
-_SENSES = frozenset({"LINEAR", "RIGHT", "LEFT"})
-_COLUMNS = 11  # theta, phi, three gains, axial ratio, tilt, magnitude and phase of both fields; the sense is a word
-_TOTAL_GAIN = 4
-_SENSE = 7
+_TOTAL_GAIN, _E_THETA, _E_PHI = 4, 7, 9
 _MOST_NAMED = 5
 _FAINT_DB = 20.0  # below the peak by more, the printed gain is not compared: there its field has lost digits
-
-
-@dataclass
-class _Pattern:
-    """A table headed RADIATION PATTERNS, and what was printed before it."""
-
-    path: Path
-    line: int
-    frequency_mhz: float | None
-    input_power_w: float | None
-    free_space: bool
-    directive: bool = False
-    range_m: float | None = None
-    rows: array[float] = field(default_factory=lambda: array("d"))
-    lines: array[int] = field(default_factory=lambda: array("q"))
-
-    @property
-    def where(self) -> str:
-        return f"{self.path}: line {self.line}"
+_PHI_ROUNDING_DEG = 0.02  # angles are printed to 0.01 deg
 
 
 @dataclass(frozen=True, eq=False)
@@ -92,13 +62,12 @@ def read_nec_files(source: NecSource) -> FarField:
         or the fields contradict the printed gain. All problems together, each with its file and line.
     """
     problems: list[str] = []
-    patterns = [pattern for path in source.files for pattern in _patterns(path, problems)]
+    patterns = [pattern for path in source.files for pattern in nec_patterns(path, problems)]
     raise_if_any(problems)
     notes: list[str] = []
     cells: dict[float, list[_Cells]] = {}
     alone = [pattern.where for pattern in patterns if pattern.free_space]
     for pattern in patterns:
-        assert pattern.frequency_mhz is not None
         cells.setdefault(pattern.frequency_mhz, []).append(_scaled(pattern, problems, notes))
         pattern.rows = array("d")  # memory for the next
     raise_if_any(problems)
@@ -109,150 +78,63 @@ def read_nec_files(source: NecSource) -> FarField:
     return table
 
 
-def _patterns(path: Path, problems: list[str]) -> list[_Pattern]:
-    """The tables of a file, read line by line: print-outs of many frequencies are large."""
-    try:
-        with path.open(encoding="utf-8", errors="replace") as lines:
-            return _tables(path, lines, problems)
-    except OSError as error:
-        problems.append(f"{path}: cannot be read as a text file ({error})")
-        return []
-
-
-def _tables(path: Path, lines: Iterable[str], problems: list[str]) -> list[_Pattern]:
-    found: list[_Pattern] = []
-    frequency: float | None = None
-    power: float | None = None
-    free_space = False
-    open_table: _Pattern | None = None
-    before = len(problems)
-    for number, text in _spoken(lines):
-        if open_table is not None and _taken_at_once(open_table, number, text):
-            continue
-        where = f"{path}: line {number}"
-        if "RADIATION PATTERNS" in text.upper():
-            open_table = _Pattern(path, number, frequency, power, free_space)
-            found.append(open_table)
-        elif match := _FREQUENCY.match(text):
-            frequency, power, open_table = _positive(match, "a frequency", ("MHZ",), where, problems), None, None
-            free_space = False
-        elif text.upper() == "FREE SPACE":
-            free_space = True
-        elif match := _INPUT_POWER.match(text):
-            power = _positive(match, "an input power", ("WATTS", ""), where, problems)
-        elif open_table is not None and not _taken(open_table, number, text, problems):
-            open_table = None
-    if not found and len(problems) == before:
-        problems.append(f"{path}: holds no table headed RADIATION PATTERNS; is it the print-out of NEC-2?")
-    for pattern in found:
-        if pattern.frequency_mhz is None and len(problems) == before:
-            problems.append(f"{pattern.where}: a table of radiation patterns without a FREQUENCY before it")
-        if not pattern.rows and len(problems) == before:
-            problems.append(f"{pattern.where}: a table of radiation patterns without a row")
-    return found
-
-
-def _spoken(lines: Iterable[str]) -> Iterator[tuple[int, str]]:
-    """Lines that say something, with their numbers."""
-    for number, line in enumerate(lines, start=1):
-        text = line.strip()
-        if text:
-            yield number, text
-
-
-def _taken_at_once(table: _Pattern, number: int, text: str) -> bool:
-    """Whether a line is a plain row, as nearly all are; its numbers are taken."""
-    words = text.split()
-    if len(words) == _COLUMNS + 1 and words[_SENSE] in _SENSES:
-        del words[_SENSE]
-    if len(words) != _COLUMNS:
-        return False
-    try:
-        values = [float(word) for word in words]
-    except ValueError:
-        return False
-    if not isfinite(sum(values)):
-        return False
-    table.rows.extend(values)
-    table.lines.append(number)
-    return True
-
-
-def _taken(table: _Pattern, number: int, text: str, problems: list[str]) -> bool:
-    """Whether a line still belongs to the table; its numbers are taken."""
-    where = f"{table.path}: line {number}"
-    words = text.split()
-    if _value(words[0]) is None:
-        if match := _RANGE.match(text):
-            table.range_m = _positive(match, "a range", ("METERS", "M", ""), where, problems)
-        table.directive = table.directive or "DIRECTIVE" in text.upper()
-        return not table.rows
-    has_sense = len(words) == _COLUMNS + 1 and words[_SENSE].upper() in _SENSES
-    numbers = [*words[:_SENSE], *words[_SENSE + 1 :]] if has_sense else words
-    values = [_value(word) for word in numbers]
-    if len(numbers) != _COLUMNS:
-        problems.append(
-            f"{where}: {len(words)} columns; a row of radiation patterns has {_COLUMNS} numbers and the sense"
-        )
-    elif any(value is None for value in values):
-        wrong = next(word for word, value in zip(numbers, values, strict=True) if value is None)
-        problems.append(f"{where}: {wrong!r} is not a number")
-    else:
-        table.rows.extend(value for value in values if value is not None)
-        table.lines.append(number)
-    return True
-
-
-def _value(word: str) -> float | None:
-    """A number as Fortran or C print it; three-digit exponents stand without their letter."""
-    match = _WHOLE_NUMBER.match(word)
-    if match is None:
-        return None
-    plain = re.sub(r"(?<=[\d.])[DdEe]?([-+]\d+)$", r"e\1", match[1])
-    return float(plain)
-
-
-def _positive(match: re.Match[str], what: str, units: tuple[str, ...], where: str, problems: list[str]) -> float | None:
-    value = _value(match[1])
-    if value is None or not value > 0.0:
-        problems.append(f"{where}: {what} must be a positive number, got {match[1]!r}")
-        return None
-    if match[2].upper() not in units:
-        problems.append(f"{where}: {what} in {match[2]!r}; NEC-2 prints {units[0]}")
-        return None
-    return value
-
-
-def _scaled(pattern: _Pattern, problems: list[str], notes: list[str]) -> _Cells:
+def _scaled(pattern: NecPattern, problems: list[str], notes: list[str]) -> _Cells:
     """Fields on the scale of gain: their squares sum to 4 pi r^2 |E|^2 / (2 eta P), with E the peak value."""
-    rows = np.array(pattern.rows).reshape(-1, _COLUMNS)
-    e_theta = rows[:, 7] * np.exp(1j * np.radians(rows[:, 8]))
-    e_phi = rows[:, 9] * np.exp(1j * np.radians(rows[:, 10]))
-    path, line = np.full(len(rows), pattern.path, dtype=object), np.array(pattern.lines)
+    rows = np.array(pattern.rows).reshape(-1, COLUMNS)
+    e_theta = rows[:, _E_THETA] * np.exp(1j * np.radians(rows[:, _E_THETA + 1]))
+    e_phi = rows[:, _E_PHI] * np.exp(1j * np.radians(rows[:, _E_PHI + 1]))
     range_m = 1.0 if pattern.range_m is None else pattern.range_m
-    squared = range_m**2 * (np.abs(e_theta) ** 2 + np.abs(e_phi) ** 2)
-    if not squared.max() > 0.0:
+    squared = range_m**2 * (rows[:, _E_THETA] ** 2 + rows[:, _E_PHI] ** 2)
+    scale = 1.0
+    if squared.max() > 0.0:
+        problems += _negative_problems(pattern, rows)
+        scale = _gain_scale(pattern, rows[:, _TOTAL_GAIN], squared, problems, notes)
+    else:
         problems.append(f"{pattern.where}: the fields at {pattern.frequency_mhz:g} MHz are zero everywhere")
-        return _Cells(rows[:, 0], rows[:, 1], e_theta, e_phi, path, line)
-    bright = squared > squared.max() * 10.0 ** (-_FAINT_DB / 10.0)
-    per_field = rows[bright, _TOTAL_GAIN] - 10.0 * np.log10(squared[bright])
+    root = range_m * np.sqrt(scale)
+    path, line = np.full(len(rows), pattern.path, dtype=object), np.array(pattern.lines)
+    return _Cells(rows[:, 0], rows[:, 1], root * e_theta, root * e_phi, path, line)
+
+
+def _negative_problems(pattern: NecPattern, rows: FloatArray) -> list[str]:
+    wrong = np.flatnonzero((rows[:, _E_THETA] < 0.0) | (rows[:, _E_PHI] < 0.0))
+    return [
+        f"{pattern.path}: line {pattern.lines[row]}: the magnitude of a field must not be negative, got "
+        f"{min(rows[row, _E_THETA], rows[row, _E_PHI]):g}; {len(wrong)} such rows in this table"
+        for row in wrong[:_MOST_NAMED]
+    ]
+
+
+def _gain_scale(
+    pattern: NecPattern, printed_db: FloatArray, squared: FloatArray, problems: list[str], notes: list[str]
+) -> float:
+    """Gain over the square of the field; where both are printed, one must bear out the other in every bright row."""
+    with np.errstate(divide="ignore"):
+        field_db = 10.0 * np.log10(squared)
+    bright = np.flatnonzero((field_db > field_db.max() - _FAINT_DB) | (printed_db > printed_db.max() - _FAINT_DB))
+    per_field = printed_db[bright] - field_db[bright]
+    level_db = float(np.median(per_field))
+    problems += [
+        f"{pattern.path}: line {pattern.lines[row]}: the printed gain lies "
+        f"{printed_db[row] - field_db[row] - level_db:+.2f} dB from that of the fields, by the scale of the rest of "
+        f"the table; allowed is {GAIN_TOLERANCE_DB:g}"
+        for row in bright[np.abs(per_field - level_db) > GAIN_TOLERANCE_DB][:_MOST_NAMED]
+    ]
     if pattern.input_power_w is None:
-        scale = 10.0 ** (per_field.mean() / 10.0)
         kind = "directive" if pattern.directive else "power"
         notes.append(
             f"{pattern.where}: no INPUT POWER at {pattern.frequency_mhz:g} MHz; the fields are scaled to the printed "
             f"{kind} gain, whose rounding is worth {0.01 / np.sqrt(12.0 * len(per_field)):.1e} dB"
         )
-    else:
-        scale = 4.0 * np.pi / (2.0 * FREE_SPACE_IMPEDANCE_OHM * pattern.input_power_w)
-        apart = float(np.median(per_field) - 10.0 * np.log10(scale))
-        if not pattern.directive and abs(apart) > GAIN_TOLERANCE_DB:
-            problems.append(
-                f"{pattern.where}: at {pattern.frequency_mhz:g} MHz the printed gain lies {apart:+.2f} dB from that "
-                f"of the fields and the INPUT POWER; allowed is {GAIN_TOLERANCE_DB:g}"
-            )
-    root = range_m * np.sqrt(scale)
-    return _Cells(rows[:, 0], rows[:, 1], root * e_theta, root * e_phi, path, line)
+        return float(10.0 ** (per_field.mean() / 10.0))
+    scale = 4.0 * np.pi / (2.0 * FREE_SPACE_IMPEDANCE_OHM * pattern.input_power_w)
+    apart = level_db - 10.0 * np.log10(scale)
+    if not (pattern.directive or abs(apart) <= GAIN_TOLERANCE_DB):
+        problems.append(
+            f"{pattern.where}: at {pattern.frequency_mhz:g} MHz the printed gain lies {apart:+.2f} dB from that "
+            f"of the fields and the INPUT POWER; allowed is {GAIN_TOLERANCE_DB:g}"
+        )
+    return float(scale)
 
 
 def _on_a_grid(cells: dict[float, list[_Cells]], name: str, notes: tuple[str, ...]) -> FarField:
@@ -265,8 +147,9 @@ def _on_a_grid(cells: dict[float, list[_Cells]], name: str, notes: tuple[str, ..
     problems: list[str] = []
     for number, (frequency, table) in enumerate(tables.items()):
         row, column = np.searchsorted(theta, table.theta_deg), np.searchsorted(phi, table.phi_deg)
-        problems += _cover_problems(frequency, theta, phi, table, row * len(phi) + column, name)
+        problems += _cover_problems(frequency, theta, phi, table, row * len(phi) + column)
         e_theta[number, row, column], e_phi[number, row, column] = table.e_theta, table.e_phi
+    problems = problems or _cut_problems(phi, next(iter(tables.values())))
     raise_if_any(problems)
     power = np.abs(e_theta) ** 2 + np.abs(e_phi) ** 2
     below = theta > 90.0
@@ -286,7 +169,7 @@ def _joined(parts: list[_Cells]) -> _Cells:
 
 
 def _cover_problems(
-    frequency_mhz: float, theta_deg: FloatArray, phi_deg: FloatArray, table: _Cells, cell: NDArray[np.int64], name: str
+    frequency_mhz: float, theta_deg: FloatArray, phi_deg: FloatArray, table: _Cells, cell: NDArray[np.int64]
 ) -> list[str]:
     """Cells that a frequency fills twice, with their lines, or leaves empty, with their angles."""
     counts = np.bincount(cell, minlength=len(theta_deg) * len(phi_deg))
@@ -307,7 +190,20 @@ def _cover_problems(
     if len(empty):
         named = "; ".join(angles(number) for number in empty[:_MOST_NAMED])
         problems.append(
-            f"{name}: {len(empty)} of {counts.size} directions missing at {frequency_mhz:g} MHz: {named}; all "
-            "frequencies must stand on one full grid"
+            f"{place(-1)}: the table ends, and {len(empty)} of {counts.size} directions are missing at "
+            f"{frequency_mhz:g} MHz: {named}; all frequencies must stand on one full grid"
         )
     return problems
+
+
+def _cut_problems(phi_deg: FloatArray, table: _Cells) -> list[str]:
+    """A wider gap after the last phi than between the others: phi runs slowest, so that a cut takes the last."""
+    if len(phi_deg) < 2:
+        return []
+    gap, step = 360.0 - (phi_deg[-1] - phi_deg[0]), float(np.diff(phi_deg).max())
+    if gap <= step + _PHI_ROUNDING_DEG:
+        return []
+    return [
+        f"{table.path[-1]}: line {table.line[-1]}: phi ends at {phi_deg[-1]:g} deg, {gap:g} deg before the turn "
+        f"closes, and its steps are {step:g} deg at most; is the print-out cut short?"
+    ]

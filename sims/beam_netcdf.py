@@ -16,6 +16,7 @@ from sims.far_field import FarField, far_field
 
 FloatArray = NDArray[np.float64]
 _AXES = {"frequency": "MHz", "theta": "deg", "phi": "deg"}
+_VALUE_UNITS = {"db": "dBi", "dbi": "dBi", "1": "linear", "linear": "linear", "dimensionless": "linear"}
 _PLURALS = {"degrees": "deg", "radians": "rad"}  # as the CF conventions spell them, and astropy does not
 
 
@@ -81,8 +82,13 @@ def _value_problems(dataset: xr.Dataset, name: str, source: NetcdfSource) -> lis
             f"{source.file}: {name}: holds {kind}; real numbers are needed, of complex fields both parts, each by "
             "itself (field_variables)"
         )
-    unit = {"db": "dBi", "dbi": "dBi", "1": "linear"}.get(stated, source.unit)
-    if source.variable is not None and unit != source.unit:
+    if source.variable is None or not stated:
+        return problems
+    if stated not in _VALUE_UNITS:
+        problems.append(
+            f"{source.file}: {name}: units {stated!r} in the file; allowed are dBi, dB, 1, linear, dimensionless, none"
+        )
+    elif _VALUE_UNITS[stated] != source.unit:
         problems.append(f"{source.file}: {name}: units {stated!r} in the file, but declared is unit = {source.unit!r}")
     return problems
 

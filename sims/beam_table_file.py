@@ -105,7 +105,7 @@ def _table(source: TableSource, path: Path, columns: list[int], problems: list[s
             warnings.filterwarnings("ignore", message="loadtxt: input contained no data")
             table = np.loadtxt(
                 path, delimiter=DELIMITERS[source.delimiter], skiprows=source.header_lines, usecols=columns, ndmin=2,
-                encoding="latin-1",
+                encoding=_encoding(path),
             )  # fmt: skip
     except (ValueError, OSError, IndexError):
         before = len(problems)
@@ -117,6 +117,12 @@ def _table(source: TableSource, path: Path, columns: list[int], problems: list[s
         problems.append(f"{path}: no row after {source.header_lines} header lines")
         return None
     return table
+
+
+def _encoding(path: Path) -> str:
+    """The one that takes every byte, unless the file says at its start that it is another."""
+    with path.open("rb") as file:
+        return "utf-8-sig" if file.read(3) == b"\xef\xbb\xbf" else "latin-1"
 
 
 def _bad_lines(source: TableSource, path: Path, columns: list[int]) -> list[str]:

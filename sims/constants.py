@@ -20,6 +20,7 @@ MOON_J2_RADIUS_KM = 1738.0  # reference radius of the GRAIL gravity fields (from
 MOON_MEAN_RADIUS_KM = 1737.4  # NASA Moon fact sheet
 MOON_ROTATION_DEG_PER_DAY = 13.17635815  # mean, sidereal; IAU rotation model, Archinal et al. 2018 (from memory)
 EARTH_ROTATION_RAD_PER_S = 7.292115e-5  # nominal mean angular velocity; IERS Conventions 2010, table 1.2
+EARTH_GM_KM3_PER_S2 = 398_600.4418  # with the atmosphere; IERS Conventions 2010, table 1.1
 EARTH_EQUATORIAL_RADIUS_KM = 6378.137  # WGS 84
 SUN_RADIUS_KM = 695_700.0  # nominal, photosphere; IAU 2015 Resolution B3
 AU_KM = 149_597_870.7  # IAU 2012 Resolution B2 (exact)

@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 from sims.constants import MOON_MEAN_RADIUS_KM
 from sims.errors import InputError, raise_if_any
 from sims.orbit_lines import HEADER, META, SCALES, Block, Entry, sort_lines, times_on_tt
+from sims.orbit_sequence import steps_between
 
 FloatArray = NDArray[np.float64]
 VERSIONS = ("1.0", "2.0", "3.0")
@@ -96,7 +97,8 @@ def read_orbit_message(path: Path) -> OrbitMessage:
     path : Path
         Text file, KVN form, one object about the Moon, in ICRF, GCRF or EME2000 (J2000), times
         on UTC, TAI, TT, TDB or GPS. Accelerations and covariances are passed over. Where a segment
-        names no interpolation, Hermite of degree 7 is taken.
+        names no interpolation, Hermite of degree 7 is taken. States must follow one from the other
+        as the Moon's gravity has it (`sims.orbit_sequence`): a manoeuvre begins a new segment.
 
     Returns
     -------
@@ -184,6 +186,7 @@ def _segment(block: Block, faults: list[Entry]) -> OrbitSegment | None:
     if len(faults) > before or len(numbers) < len(block.states) or frame is None or times is None:
         return None
     states = np.array(numbers, dtype=float)
+    _judge_sequence(block, times, states, faults)
     segment = OrbitSegment(
         times=times,
         position_km=states[:, :3],
@@ -250,6 +253,23 @@ def _judge_states(block: Block, faults: list[Entry]) -> None:
     for at in np.flatnonzero((speed > FASTEST_KM_PER_S) | (swept <= 1e-9 * distance * speed)):
         allowed = f"up to {FASTEST_KM_PER_S:g} km/s and not straight up or down are allowed"
         faults.append(Entry(read[at][0], f"the motion is {states[at, 3:].tolist()} km/s; {allowed}"))
+
+
+def _judge_sequence(block: Block, times: Time, states: FloatArray, faults: list[Entry]) -> None:
+    """Refuse states that do not follow from the ones before: a wrong digit, or a motion that changes at once."""
+    seconds = ((times.jd1 - times.jd1[0]) + (times.jd2 - times.jd2[0])) * 86_400.0
+    steps = steps_between(seconds, states[:, :3], states[:, 3:])
+    faults += [
+        Entry(
+            block.states[at + 1].line,
+            f"the state does not follow from that of line {block.states[at].line}, "
+            f"{seconds[at + 1] - seconds[at]:.1f} s before: gravity leaves {steps.place_km[at]:.3g} km and "
+            f"{steps.motion_km_per_s[at]:.3g} km/s between them unexplained, up to {steps.place_limit_km[at]:.2g} km "
+            f"and {steps.motion_limit_km_per_s[at]:.2g} km/s are allowed; one of the two is wrong, or a manoeuvre "
+            "needs a segment of its own",
+        )
+        for at in np.flatnonzero(steps.broken)
+    ]
 
 
 def _bounds(block: Block, scale: str, faults: list[Entry]) -> dict[str, Time]:

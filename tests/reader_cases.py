@@ -9,13 +9,29 @@ import healpy as hp
 import numpy as np
 import xarray as xr
 
-from sims.config_beam import FieldColumns, HealpixSource, NetcdfSource, PowerColumn, TableSource
+from sims.beam import beam_from
+from sims.config_beam import Dipole, FieldColumns, HealpixSource, NetcdfSource, PowerColumn, TableSource
 
 FREQUENCY_MHZ = np.array([50.0, 70.0, 90.0])
 THETA_DEG = np.arange(0.0, 181.0, 3.0)
 PHI_DEG = np.arange(0.0, 360.0, 3.0)
 Pattern = Callable[[np.ndarray, np.ndarray], np.ndarray]
 """frequency_mhz, directions[point, 3] -> power[point, frequency]."""
+SETTINGS = {"kind": "dipole", "length_m": 2.0, "efficiency": 1.0, "structure_temperature_k": 270.0}
+_TILTED = beam_from(Dipole(tilt_deg=25.0, tilt_azimuth_deg=40.0, turn_deg=10.0, **SETTINGS))  # type: ignore[arg-type]
+_OVER_PLANE = beam_from(Dipole(height_m=1.5, **SETTINGS))  # type: ignore[arg-type]
+
+
+def tilted(frequency_mhz: np.ndarray, directions: np.ndarray) -> np.ndarray:
+    """A dipole whose wire lies along no axis of the grid: its own frame is turned into that of the file."""
+    return _TILTED.directivity(frequency_mhz, directions @ _TILTED.mounting)
+
+
+def over_plane(frequency_mhz: np.ndarray, directions: np.ndarray) -> np.ndarray:
+    """A dipole over a conducting plane; directions on the horizon lie a hair above it."""
+    lifted = directions.copy()
+    lifted[np.abs(lifted[:, 2]) < 1e-14, 2] = 1e-14
+    return _OVER_PLANE.directivity(frequency_mhz, lifted)
 
 
 def grid_directions(theta_deg: np.ndarray, phi_deg: np.ndarray) -> np.ndarray:

@@ -83,6 +83,9 @@ def test_spin_goes_round_its_axis_once_a_period() -> None:
     quarter = z[5] - axis * (z[5] @ axis)
     start = z[0] - axis * (z[0] @ axis)
     assert quarter @ start == pytest.approx(0.0, abs=1e-14)
+    north = np.array([0.0, 0.0, 1.0]) - 0.5 * axis
+    # Phase counts from north: 15 deg of it are left between them at the start.
+    assert start @ north / np.linalg.norm(start) / np.linalg.norm(north) == pytest.approx(np.cos(np.radians(15.0)))
     # From north through east is clockwise seen from outside, against the axis's own right-handed turn.
     assert np.cross(start, quarter) @ axis < 0
 

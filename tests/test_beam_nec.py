@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Callable
 from pathlib import Path
 
 import numpy as np
@@ -98,10 +97,27 @@ def test_dipole_over_a_plane_against_the_image_theorem(tmp_path: Path) -> None:
     assert np.all(np.abs(directivity(thick) - closed).max(axis=(1, 2)) / peak > 1.5 * apart)
 
 
+@pytest.mark.parametrize(
+    ("antenna", "balance"),
+    [
+        # Power of a source, from its current, against that of the far field. Measured: NEC-2 balances the two to 2.4e-4
+        # for wires of a quarter wave to nearly a wave, and to 2.8e-3 for one of a hundredth of a wave.
+        *((two_metre_dipole(frequency), 3e-4) for frequency in FIVE_MHZ),
+        (run((0, 0, 0, 0, 0, 0.25), 1e-5, 21, 1, METRE_WAVE_MHZ, plane=True), 3e-4),
+        (run((-1, 0, 1.5, 1, 0, 1.5), 0.001, 41, 21, 60.0, plane=True), 3e-4),
+        (run((-0.005, 0, 0, 0.005, 0, 0), 1e-5, 11, 6, METRE_WAVE_MHZ), 4e-3),
+    ],
+)
+def test_lossless_wires_radiate_what_goes_in(antenna: Run, balance: float, tmp_path: Path) -> None:
+    table = read(tmp_path, antenna)
+    assert table.radiated_fraction[0] == pytest.approx(1.0, abs=balance)
+    assert not any("no INPUT POWER" in note for note in table.notes)
+
+
 def test_power_balances_over_the_sphere_and_losses_show(tmp_path: Path) -> None:
     lossless = read(tmp_path, two_metre_dipole(60.0))
-    # NEC-2 balances radiated and input power to a few parts in ten thousand for a good model.
-    assert lossless.radiated_fraction[0] == pytest.approx(1.0, abs=1e-3)
+    # As in the test before.
+    assert lossless.radiated_fraction[0] == pytest.approx(1.0, abs=3e-4)
     resistive = read(tmp_path, two_metre_dipole(60.0, conductivity_s_per_m=1e5))
     # Impedance of a round wire within (Ramo, Whinnery and Van Duzer, Fields and Waves), worn by the square of a current
     # that falls from its middle as sin(k (1 - x)), both ways.
@@ -153,13 +169,6 @@ def test_print_out_of_the_code_itself() -> None:
     assert dbi(directivity(table)[:, 0, 0]) == pytest.approx([1.8688, 2.5565], abs=2e-3)
 
 
-@pytest.mark.parametrize("style", [{"fortran": True}, {"blank_sense": True}, {"fortran": True, "blank_sense": True}])
-def test_layouts_of_the_code_and_its_translations_read_the_same(style: dict[str, bool], tmp_path: Path) -> None:
-    runs = [two_metre_dipole(40.0, step_deg=15.0), two_metre_dipole(100.0, step_deg=15.0)]
-    # Five digits and six.
-    assert read(tmp_path, *runs, **style).power == pytest.approx(read(tmp_path, *runs).power, rel=5e-4, abs=1e-9)
-
-
 def test_a_set_of_files_is_one_of_many_frequencies(tmp_path: Path) -> None:
     runs = [two_metre_dipole(frequency, step_deg=15.0) for frequency in (100.0, 40.0, 60.0)]
     files = [written(tmp_path / f"{number}.txt", listing([one])).files[0] for number, one in enumerate(runs)]
@@ -203,92 +212,6 @@ def test_a_range_is_taken_out_again(tmp_path: Path) -> None:
              *table[3:]]  # fmt: skip
     got = read_nec_files(written(tmp_path / "far.txt", [*head, *asked, *rows(far)]))
     assert got.power == pytest.approx(read(tmp_path, antenna).power, rel=2e-4, abs=1e-12)
-
-
-Edit = Callable[[list[str]], list[str]]
-
-
-def lines_of(step_deg: float = 30.0) -> list[str]:
-    return listing([two_metre_dipole(40.0, step_deg=step_deg), two_metre_dipole(60.0, step_deg=step_deg)])
-
-
-def replaced(old: str, new: str) -> Edit:
-    return lambda lines: [line.replace(old, new) for line in lines]
-
-
-def at(number: int, line: str | None) -> Edit:
-    """A line replaced, by its number from 1, or left out."""
-    return lambda lines: [*lines[: number - 1], *([] if line is None else [line]), *lines[number:]]
-
-
-def fine_rows_to(theta_deg: float) -> list[str]:
-    return [line for line in rows(two_metre_dipole(40.0, step_deg=15.0)) if float(line.split()[0]) <= theta_deg]
-
-
-FIRST_ROW = 1 + next(number for number, line in enumerate(lines_of()) if line.split()[:2] == ["0.00", "0.00"])
-ROW = lines_of()[FIRST_ROW - 1]
-SECOND_MHZ = 1 + next(number for number, line in enumerate(lines_of()) if "FREQUENCY : 6" in line)
-BAD: dict[str, tuple[Edit, str]] = {
-    "other file": (lambda lines: ["theta,phi,gain", "0,0,1"], "no table headed RADIATION PATTERNS"),
-    "empty": (lambda lines: [], "no table headed RADIATION PATTERNS"),
-    "stars for a number": (at(FIRST_ROW, ROW.replace("-999.99", "*******", 1)), f"line {FIRST_ROW}: '*******' is not"),
-    "nan": (at(FIRST_ROW, ROW.replace("0.0000", "   nan", 1)), f"line {FIRST_ROW}: 'nan' is not a number"),
-    "short row": (at(FIRST_ROW, ROW[:60]), f"line {FIRST_ROW}: 6 columns"),
-    "missing row": (at(FIRST_ROW + 1, None), "directions missing at 40 MHz: theta 30, phi 0 deg"),
-    "row twice": (at(FIRST_ROW + 1, ROW), f"line {FIRST_ROW + 1}: theta 0, phi 0 deg at 40 MHz is given twice"),
-    "frequency in GHz": (replaced("MHz", "GHz"), "a frequency in 'GHz'"),
-    "frequency unreadable": (replaced("6.0000E+01 MHz", "?????????? MHz"), f"line {SECOND_MHZ}: a frequency must be"),
-    "no frequency": (lambda lines: [line for line in lines if "FREQUENCY :" not in line], "without a FREQUENCY"),
-    "negative power": (replaced("POWER   = ", "POWER   = -"), "an input power must be a positive number"),
-    "cut short": (lambda lines: lines[:-40], "directions missing at 60 MHz"),
-    "head only": (lambda lines: lines[: FIRST_ROW - 1], "without a row"),
-    "another input power": (replaced("INPUT POWER   =  1", "INPUT POWER   =  2"), "the printed gain lies"),
-    "one frequency twice": (replaced("6.0000E+01 MHz", "4.0000E+01 MHz"), "at 40 MHz is given twice; first at"),
-    "half of free space": (
-        lambda lines: ["FREQUENCY : 4.0E+01 MHz", "FREE SPACE", *columns(fortran=False), *fine_rows_to(90.0)],
-        "line 4: an antenna in FREE SPACE radiates below theta 90 deg",
-    ),
-    "theta to 75": (
-        lambda lines: ["FREQUENCY : 4.0E+01 MHz", *columns(fortran=False), *fine_rows_to(75.0)],
-        "a gap of 210 deg in theta",
-    ),
-}  # fmt: skip
-
-
-@pytest.mark.parametrize("case", sorted(BAD))
-def test_malformed_print_out(case: str, tmp_path: Path) -> None:
-    edit, told = BAD[case]
-    source = written(tmp_path / "bad.txt", edit(lines_of()))
-    with pytest.raises(InputError) as caught:
-        read_nec_files(source)
-    text = "\n".join(caught.value.problems)
-    assert told in text
-    assert "bad.txt" in text
-
-
-def test_faults_of_all_files_are_told_at_once(tmp_path: Path) -> None:
-    one = written(tmp_path / "one.txt", at(FIRST_ROW, ROW[:60])(lines_of())).files[0]
-    two = written(tmp_path / "two.txt", ["nothing"]).files[0]
-    with pytest.raises(InputError) as caught:
-        read_nec_files(NecSource(format="nec", files=(one, two, tmp_path / "gone.txt")))
-    assert [name for name in ("one.txt", "two.txt", "gone.txt") if name in "\n".join(caught.value.problems)] == [
-        "one.txt", "two.txt", "gone.txt",
-    ]  # fmt: skip
-
-
-@pytest.mark.parametrize(("printed", "value"), [("1.2345-117", 0.0), ("1.2345D-01", 0.12345), (".12345", 0.12345)])
-def test_numbers_as_fortran_prints_them(printed: str, value: float, tmp_path: Path) -> None:
-    """Exponents of three digits lose their letter, and those of double precision have a D."""
-    words = lines_of()[FIRST_ROW].split()
-    assert words[:2] == ["30.00", "0.00"]
-    changed = " ".join([*words[:10], printed, *words[11:]])
-    table = read_nec_files(written(tmp_path / "fortran.txt", at(FIRST_ROW + 1, changed)(lines_of())))
-    plain = read_nec_files(written(tmp_path / "plain.txt", lines_of()))
-    assert table.e_phi is not None
-    assert plain.e_theta is not None
-    scale = np.abs(plain.e_theta[0, 1, 0]) / float(words[8])
-    # The sum and its parts are rounded in double precision only.
-    assert np.abs(table.e_phi[0, 1, 0]) == pytest.approx(scale * value, rel=1e-9, abs=1e-90)
 
 
 def with_rows(antenna: Run, chosen: list[str]) -> list[str]:

@@ -13,9 +13,11 @@ from reader_cases import (
     FREQUENCY_MHZ,
     PHI_DEG,
     THETA_DEG,
+    Pattern,
     grid_directions,
     on_grid,
     table_source,
+    tilted,
     write_fields,
     write_healpix,
     write_netcdf,
@@ -56,13 +58,14 @@ def beam_of(table: FarField) -> GridBeam:
     return grid_beam(table, smoothing_mhz=None, mounting=np.eye(3), efficiency=1.0, structure_temperature_k=270.0)
 
 
-def test_one_pattern_through_every_reader_gives_one_antenna_temperature(tmp_path: Path) -> None:
+@pytest.mark.parametrize("pattern", [DIPOLE.directivity, tilted], ids=["upright", "tilted"])
+def test_one_pattern_through_every_reader_gives_one_antenna_temperature(pattern: Pattern, tmp_path: Path) -> None:
     grid = pixel_grid(16)
     x, y, z = grid.directions.T
     sky_k = 2000.0 * np.exp(0.8 * z + 0.3 * x * y + 0.5 * y)
-    exact = DIPOLE.directivity(FREQUENCY_MHZ, grid.directions)
+    exact = pattern(FREQUENCY_MHZ, grid.directions)
     expected = (exact * (grid.weights * sky_k)[:, None]).mean(axis=0)
-    for name, table in through_every_reader(tmp_path, DIPOLE.directivity).items():
+    for name, table in through_every_reader(tmp_path, pattern).items():
         beam = beam_of(table)
         gain = beam.directivity(FREQUENCY_MHZ, grid.directions)
         got = (gain * (grid.weights * sky_k)[:, None]).mean(axis=0)

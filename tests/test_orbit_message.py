@@ -10,6 +10,7 @@ import pytest
 from astropy.time import Time
 from orbit_message_cases import BETWEEN, HEADER, NODES, instants, message, miss_km, segment, truth
 
+from sims.constants import MOON_GM_KM3_PER_S2
 from sims.errors import InputError
 from sims.orbit_message import read_orbit_message
 from sims.orbit_states import orbit_from_message
@@ -31,17 +32,21 @@ def test_every_time_system_tells_the_same_orbit(tmp_path: Path, system: str, day
 
 
 def test_utc_steps_over_a_leap_second(tmp_path: Path) -> None:
-    # 2016-12-31T23:59:60 was one (IERS Bulletin C 52). Three states 30 s apart around it, on a straight line.
-    stamps = ("2016-12-31T23:59:31", "2016-12-31T23:59:60.5", "2017-01-01T00:00:30")
-    rows = [
-        f"{stamp} 2000.0 {offset} 0.0 0.0 1.5 0.0" for stamp, offset in zip(stamps, (0.0, 44.25, 90.0), strict=True)
-    ]
+    # 2016-12-31T23:59:60 was one (IERS Bulletin C 52). Three states around it of a circle of 2000 km.
+    stamps, seconds = ("2016-12-31T23:59:31", "2016-12-31T23:59:60.5", "2017-01-01T00:00:30"), (0.0, 29.5, 60.0)
+    speed = np.sqrt(MOON_GM_KM3_PER_S2 / 2000.0)
+    rows = []
+    for stamp, turned in zip(stamps, np.array(seconds) * speed / 2000.0, strict=True):
+        cosine, sine = np.cos(turned), np.sin(turned)
+        rows.append(f"{stamp} {2000.0 * cosine} {2000.0 * sine} 0.0 {-speed * sine} {speed * cosine} 0.0")
     metadata = segment(NODES, lines=("INTERPOLATION = LINEAR",)).split("META_STOP")[0].splitlines()
     metadata = [line for line in metadata if not line.startswith(("START_TIME", "STOP_TIME"))]
     bounds = [f"START_TIME = {stamps[0]}", f"STOP_TIME = {stamps[2]}", "META_STOP"]
     read = message(tmp_path, HEADER + "\n".join([*metadata, *bounds, *rows]))
     track = orbit_from_message(read, Time(["2016-12-31T23:59:51", "2017-01-01T00:00:10"], scale="utc"))
-    np.testing.assert_allclose(track.position_km[:, 1], [30.0, 60.0], atol=1e-9)  # dates to 1e-11 s
+    # 20 s, and 40 s with the leap second; the chord strays by r (n h)^2/8 = 0.14 km, 0.004 km of it along y.
+    along_km = 2000.0 * np.sin(np.array([20.0, 40.0]) * speed / 2000.0)
+    np.testing.assert_allclose(track.position_km[:, 1], along_km, atol=5e-3)
 
 
 def test_comments_covariances_accelerations_and_odd_line_ends_are_passed_over(tmp_path: Path) -> None:
@@ -91,6 +96,15 @@ def field(index: int, new: str) -> Callable[[], tuple[str, int]]:
         return at_line(FIRST_STATE + 4, " ".join(fields))
 
     return change
+
+
+def digit(index: int, by: float) -> Callable[[], tuple[str, int]]:
+    """Change a number of the fifth state."""
+    return lambda: field(index, f"{float(LINES[FIRST_STATE + 3].split()[index]) + by:.12f}")()
+
+
+def sign(index: int) -> Callable[[], tuple[str, int]]:
+    return lambda: field(index, f"{-float(LINES[FIRST_STATE + 3].split()[index]):.12f}")()
 
 
 def state(row: str) -> Callable[[], tuple[str, int]]:
@@ -145,6 +159,9 @@ FAULTS: dict[str, tuple[Callable[[], tuple[str, int]], str]] = {
     "in metres": (state("1.9e6 0 0 0 1.5 0"), "1.9e+06 km from the Moon's centre"),
     "in metres a second": (state("1900 0 0 0 1500 0"), "up to 10 km/s"),
     "at rest": (state("1900 0 0 0 0 0"), "not straight up or down are allowed"),
+    "digit of the place": (digit(1, 5.0), "unexplained, up to 0.51 km and"),
+    "digit of the motion": (digit(6, 0.02), "one of the two is wrong, or a manoeuvre needs a segment of its own"),
+    "sign of the motion": (sign(5), "the state does not follow from that of line"),
     "falling": (state("1900 0 0 -1 0 0"), "not straight up or down are allowed"),
 }  # fmt: skip
 

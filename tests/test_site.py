@@ -120,6 +120,19 @@ def test_vertical_north_and_meridian_hold_together() -> None:
     np.testing.assert_allclose(apart_hours * 3600.0, 0.0, atol=1e-6)  # same series twice: rounding
 
 
+def test_site_moves_eastward_as_its_place_changes() -> None:
+    middle = MEASURED[1].tt
+    times = Time(middle.jd1, middle.jd2 + np.array([-1.0, 0.0, 1.0]) / 86_400.0, format="jd", scale="tt")
+    for place in PLACES:
+        ours = track(place, times)
+        rate = (ours.position_km[2] - ours.position_km[0]) / 2.0
+        # The chord over 2 s falls short by 1e-9; precession carries the site by 1e-7 of the rotation.
+        np.testing.assert_allclose(ours.velocity_km_per_s[1], rate, atol=1e-7)
+        # The vertical stands at the geodetic latitude over the equator (definition).
+        height = np.einsum("ta,ta->t", ours.pole, ours.zenith)
+        np.testing.assert_allclose(np.degrees(np.arcsin(height)), place[0], atol=1e-12)
+
+
 def test_later_years_need_no_network_and_say_what_was_assumed(
     monkeypatch: pytest.MonkeyPatch, caplog: pytest.LogCaptureFixture
 ) -> None:

@@ -1,97 +1,37 @@
-"""The geometry of the samples: limb, eclipses, attitude and selection, against closed forms and DE421."""
+"""The geometry of the samples: limb, eclipses and attitude, against closed forms and DE421."""
 
 from __future__ import annotations
 
-import warnings
-from datetime import UTC, datetime, timedelta, timezone
-from pathlib import Path
-from typing import Any, Literal
+from datetime import timedelta
 
 import astropy.units as u
-import de421
 import numpy as np
 import pytest
-import xarray as xr
 from astropy.coordinates import AltAz, EarthLocation, SkyCoord, get_body
 from astropy.time import Time
 from astropy.utils import iers
-from jplephem import Ephemeris
-from numpy.typing import NDArray
 from scipy.spatial.transform import Rotation
+from vantage_cases import (
+    LIMB_DEG,
+    MOON_RADIUS_KM,
+    START,
+    TWO_FIELDS,
+    antenna_axes,
+    de421_earth_sun_from_moon_km,
+    earth_and_sun_at,
+    observation,
+    orbit,
+    orbit_about,
+    site,
+    unit,
+)
 
-from sims.attitude import fixed_attitudes, pointing_turns
-from sims.config import FixedBoresight, GroundSite, LunarOrbit, LunarSurface, Observation, VerticalBoresight
+from sims.attitude import fixed_attitudes
+from sims.config import FixedBoresight, GroundSite, LunarOrbit, VerticalBoresight
 from sims.constants import EARTH_EQUATORIAL_RADIUS_KM, SUN_RADIUS_KM
-from sims.errors import InputError
 from sims.moon_frame import lunar_equator_axes
 from sims.orbit import period_s
-from sims.vantage import full_geometry, sample_times, survey_geometry
-
-START = datetime(2027, 6, 1, tzinfo=UTC)
-LIMB_DEG = 71.00998  # angular radius of the Moon from 100 km: asin(1737.4/1837.4)
-MOON_RADIUS_KM = 1737.4
-UP = VerticalBoresight(kind="vertical", azimuth_deg=0.0)
-TWO_FIELDS = FixedBoresight(kind="fixed", directions_deg=((80.0, -30.0), (200.0, 45.0)), roll_deg=25.0, dwell_s=600.0)
-Vector = NDArray[np.float64]
-
-
-def observation(**changes: Any) -> Observation:
-    settings: dict[str, Any] = {
-        "start": START,
-        "step_s": 10.0,
-        "count": 707,
-        "integration_hours": 100.0,
-        "duty_cycle": 0.5,
-        "require": (),
-    }
-    return Observation(**(settings | changes))
-
-
-def orbit(boresight: FixedBoresight | VerticalBoresight = UP, **changes: float) -> LunarOrbit:
-    elements = {"altitude_km": 100.0, "inclination_deg": 70.0, "node_deg": 15.0, "phase_deg": 0.0} | changes
-    return LunarOrbit(kind="lunar-orbit", boresight=boresight, oblateness=False, **elements)
-
-
-def site(boresight: FixedBoresight | VerticalBoresight = UP, **changes: float) -> GroundSite:
-    place = {"latitude_deg": -26.7, "longitude_deg": 116.6, "height_m": 380.0, "horizon_deg": 0.0} | changes
-    return GroundSite(kind="ground", boresight=boresight, **place)
-
-
-def orbit_about(normal: Vector, towards: Vector) -> LunarOrbit:
-    """The orbit about a given normal (ICRS) that starts above a given direction in its plane."""
-    axes = lunar_equator_axes(Time(START))
-    x, y, z = axes @ normal
-    node_rad = np.arctan2(x, -y)
-    to_node = np.array([np.cos(node_rad), np.sin(node_rad), 0.0]) @ axes
-    phase_rad = np.arctan2(towards @ np.cross(normal, to_node), towards @ to_node)
-    return orbit(
-        inclination_deg=float(np.rad2deg(np.arccos(z))),
-        node_deg=float(np.rad2deg(node_rad)),
-        phase_deg=float(np.rad2deg(phase_rad)),
-    )
-
-
-def unit(vectors: Vector) -> Vector:
-    return np.asarray(vectors / np.linalg.norm(vectors, axis=-1, keepdims=True))
-
-
-def de421_earth_sun_from_moon_km(labels: NDArray[np.datetime64]) -> Vector:
-    jd = Time(labels, scale="utc").tdb.jd
-    ephemeris = Ephemeris(de421)
-    moon_from_earth = ephemeris.position("moon", jd).T
-    moon = ephemeris.position("earthmoon", jd).T + moon_from_earth * ephemeris.moon_share
-    return np.stack([-moon_from_earth, ephemeris.position("sun", jd).T - moon], axis=1)
-
-
-def earth_and_sun_at(instant: datetime) -> Vector:
-    label = np.array([instant.replace(tzinfo=None)], dtype="datetime64[ns]")
-    return np.asarray(de421_earth_sun_from_moon_km(label)[0])
-
-
-def antenna_axes(geometry: xr.Dataset) -> Vector:
-    """ICRS directions of the antenna's x, y and z, one row each: ndarray[time, antenna axis, axis]."""
-    return np.swapaxes(Rotation.from_quat(geometry["attitude"].values).as_matrix(), 1, 2)
-
+from sims.vantage import full_geometry, survey_geometry
 
 # --- the Moon below -------------------------------------------------------------------------------------------------
 
@@ -175,33 +115,6 @@ def test_eccentric_orbit_sees_a_moon_that_grows_and_shrinks() -> None:
     assert distance_km.max() == pytest.approx(1.4 * (MOON_RADIUS_KM + 1500.0), rel=1e-3)
     # Azimuth counts from the motion along the ground, not from the velocity, which climbs and falls.
     np.testing.assert_allclose(np.einsum("ta,ta->t", geometry["forward"], geometry["nadir"]), 0.0, atol=1e-14)
-
-
-def test_lander_sees_the_earth_where_the_sub_earth_point_says() -> None:
-    at_sub_earth = LunarSurface(
-        kind="lunar-surface", latitude_deg=-6.05, longitude_deg=-6.92, height_m=0.0, boresight=UP
-    )
-    far_side = at_sub_earth.model_copy(update={"longitude_deg": 173.08, "latitude_deg": 6.05})
-    near, far = (full_geometry(vantage, observation(count=5)) for vantage in (at_sub_earth, far_side))
-    # Sub-Earth point of 2027-06-01T00 TDB by DE421: longitude -6.922729, latitude -6.046151 deg.
-    assert np.degrees(-near["earth_depth_rad"].values[0]) == pytest.approx(90.0, abs=0.02)
-    assert not near["earth_hidden"].any()
-    assert far["earth_hidden"].all()
-    assert np.degrees(near["limb_angle_rad"].values) == pytest.approx(90.0)
-
-
-def test_mountains_hide_the_sun_that_a_level_horizon_shows(tmp_path: Path) -> None:
-    (tmp_path / "ridge.csv").write_text("azimuth_deg,elevation_deg\n0,25\n120,25\n240,25\n")
-    span = observation(step_s=600.0, count=144)
-    level, ridge = (
-        full_geometry(vantage, span)
-        for vantage in (site(), site().model_copy(update={"horizon_file": tmp_path / "ridge.csv"}))
-    )
-    elevation_deg = np.degrees(level["sun_elevation_rad"].values)
-    between = (elevation_deg > 1.0) & (elevation_deg < 24.0)
-    assert between.any()
-    assert ridge["sun_hidden"].values[between].all()
-    assert not level["sun_hidden"].values[between].any()
 
 
 # --- the ground below -----------------------------------------------------------------------------------------------
@@ -294,100 +207,3 @@ def test_vertical_boresight_on_the_ground_counts_azimuth_from_north_through_east
     # The rotation of the Earth carries a site due east.
     place = geometry["position_km"].values
     np.testing.assert_allclose(x[1:-1], unit(place[2:] - place[:-2]), atol=1e-6)  # precession: 1e-7 of the rotation
-
-
-# --- samples --------------------------------------------------------------------------------------------------------
-
-
-def test_integration_is_shared_out_over_the_samples_kept() -> None:
-    # Near full Moon the Earth and Sun stand on the same side of it; near new Moon hardly any orbit has both hidden.
-    settings = {"start": datetime(2027, 6, 18, tzinfo=UTC), "step_s": 60.0, "count": 5000}
-    everything = survey_geometry(orbit(TWO_FIELDS), observation(**settings))
-    kept = survey_geometry(orbit(TWO_FIELDS), observation(**settings, require=("earth-hidden", "sun-hidden")))
-    both = (everything["earth_hidden"] & everything["sun_hidden"]).values
-    assert 0 < kept.sizes["time"] == both.sum() < 5000
-    for name in everything.data_vars:
-        if name != "integration_s":
-            np.testing.assert_array_equal(kept[name].values, everything[name].values[both])
-    for geometry in (everything, kept):
-        assert float(geometry["integration_s"].sum()) == pytest.approx(360_000.0, rel=1e-12)  # rounding of the sum
-        assert np.ptp(geometry["integration_s"].values) == 0.0
-
-
-def test_conditions_that_are_never_met_are_refused_with_their_counts() -> None:
-    earth = unit(earth_and_sun_at(START)[0])
-    vantage = orbit_about(earth, towards=unit(np.cross(earth, [0.0, 0.0, 1.0])))  # face on: the Earth never sets
-    with pytest.raises(InputError) as caught:
-        survey_geometry(vantage, observation(require=("earth-hidden", "sun-hidden")))
-    sun_hidden = int(survey_geometry(vantage, observation())["sun_hidden"].sum())
-    assert "none of the 707 samples" in str(caught.value)
-    assert f"earth-hidden in 0, sun-hidden in {sun_hidden}" in str(caught.value)
-
-
-def test_bad_observations_are_refused() -> None:
-    def unchecked(**changes: Any) -> Observation:
-        return observation().model_copy(update=changes)
-
-    naive = unchecked(start=datetime(2027, 6, 1))
-    unknown = unchecked(require=("moon-hidden", "sun-hidden", "quiet"))
-    for wrong, said in (
-        (naive, "no time zone"),
-        (unchecked(start=datetime(1969, 7, 20, tzinfo=UTC)), "reach outside"),
-        (unchecked(step_s=1e9, count=5), "reach outside"),
-        (unchecked(step_s=1e300, count=5), "reach outside"),
-    ):
-        with pytest.raises(InputError, match=said):
-            survey_geometry(orbit(TWO_FIELDS), wrong)
-    with pytest.raises(InputError) as caught:
-        survey_geometry(orbit(), unknown)
-    assert len(caught.value.problems) == 2
-
-
-def test_each_direction_has_its_turn_for_the_dwell_time() -> None:
-    elapsed_s = np.array([0.0, 299.0, 300.0, 599.0, 600.0, 899.0, 900.0, 5400.0])
-    assert pointing_turns(elapsed_s, 300.0, 3).tolist() == [0, 0, 1, 1, 2, 2, 0, 0]
-
-
-def test_labels_and_instants_agree_with_astropy_across_a_leap_second() -> None:
-    # A leap second was inserted at the end of 2016-12-31 (IERS Bulletin C 52).
-    labels, times = sample_times(
-        observation(start=datetime(2016, 12, 31, 11, 59, 58, tzinfo=UTC), step_s=7200.5, count=13)
-    )
-    np.testing.assert_allclose((times - Time(labels, scale="utc").tt).to_value("s"), 0.0, atol=1e-9)  # rounding
-    assert labels[-1] == np.datetime64("2017-01-01T12:00:04", "ns")
-    # Between the first and last label 24 h 6 s, and the leap second.
-    assert (times[-1] - times[0]).to_value("s") == pytest.approx(86_407.0, abs=1e-6)
-
-
-def test_start_in_another_zone_is_the_same_instant() -> None:
-    local = observation(start=datetime(2027, 6, 1, 8, tzinfo=timezone(timedelta(hours=8))))
-    np.testing.assert_array_equal(sample_times(local)[0], sample_times(observation())[0])
-
-
-@pytest.mark.parametrize("vantage", [orbit(TWO_FIELDS), site()])
-@pytest.mark.parametrize("year", [2028, 2060])
-def test_later_years_are_computed_without_a_warning(vantage: LunarOrbit | GroundSite, year: int) -> None:
-    with warnings.catch_warnings():
-        warnings.simplefilter("error")
-        geometry = survey_geometry(vantage, observation(start=datetime(year, 3, 1, tzinfo=UTC)))
-    assert all(np.isfinite(geometry[name].values).all() for name in geometry.data_vars)
-    assert "no leap second beyond" in geometry.attrs["time_system"]
-
-
-@pytest.mark.parametrize(("vantage", "own"), [(orbit(TWO_FIELDS), "orbit_phase"), (site(), "sidereal_time_hours")])
-def test_dataset_is_described_and_survives_a_file(
-    vantage: LunarOrbit | GroundSite, own: Literal["orbit_phase", "sidereal_time_hours"], tmp_path: Path
-) -> None:
-    geometry = survey_geometry(vantage, observation(require=("sun-hidden",), step_s=120.0))
-    bodies = [f"{name}_direction" for name in ("earth", "sun", "moon")]
-    eclipses = [f"sun_{name}" for name in ("depth_rad", "radius_rad", "visible_fraction", "hidden")]
-    assert set(geometry.data_vars) >= {
-        *("position_km", "velocity_km_per_s", "attitude", "nadir", "forward", "pole", "limb_angle_rad", "earth_hidden"),
-        *("pointing", "integration_s", "sun_elevation_rad", own, *bodies, *eclipses),
-    }
-    assert ("beta_angle_rad" in geometry) == (own == "orbit_phase")
-    assert all({"units", "long_name"} <= set(geometry[name].attrs) for name in geometry.data_vars)
-    np.testing.assert_allclose(np.linalg.norm(geometry["attitude"], axis=-1), 1.0, atol=1e-14)  # rounding
-    geometry.to_netcdf(tmp_path / "geometry.nc", engine="h5netcdf")
-    with xr.open_dataset(tmp_path / "geometry.nc", engine="h5netcdf") as again:
-        xr.testing.assert_identical(again.load(), geometry)
