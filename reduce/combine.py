@@ -8,7 +8,7 @@ QR of the whitened F; no large variance stands in for it. What is left of whiten
     ln L(s), maximised over d = -|R s - z|^2 / 2 + log_constant      for any s.
 
 For a foreground that is not linear this is to first order in d; mu absorbs at most the signal's own size
-delta, so the error is of order delta^2 / 2T, some microkelvin (`reduce.subtract.removed_from_signal`
+delta, so the error is of order delta^2 / 2T, some microkelvin (`reduce.removed.removed_from_signal`
 computes it).
 """
 

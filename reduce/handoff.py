@@ -27,13 +27,11 @@ INFORMATION_NUMBERS = (
 DRAWN_ERROR_K = 1.0
 
 
-def bundle(spectra: xr.Dataset, fit: JointFit) -> xr.Dataset:
+def bundle(fit: JointFit) -> xr.Dataset:
     """Pack a joint fit.
 
     Parameters
     ----------
-    spectra : xarray.Dataset
-        What was fitted.
     fit : JointFit
 
     Returns
@@ -42,7 +40,7 @@ def bundle(spectra: xr.Dataset, fit: JointFit) -> xr.Dataset:
         `sims.schema.BUNDLE`, of the bins that have data.
     """
     subtraction, information = fit.subtraction, fit.information
-    packed = spectra.isel(bin=fit.bins).assign(
+    packed = fit.spectra.assign(
         foreground_k=(("bin", "channel"), subtraction.foreground_k),
         residual_k=(("bin", "channel"), subtraction.residual_k),
         foreground_modes=(("bin", "term", "channel"), _modes(fit)),
@@ -54,13 +52,15 @@ def bundle(spectra: xr.Dataset, fit: JointFit) -> xr.Dataset:
         z=("rank", information.z),
     )
     packed.attrs = {
-        **spectra.attrs,
+        **fit.spectra.attrs,
         **{name: getattr(information, name) for name in INFORMATION_NUMBERS},
         "foreground_chi_squared": subtraction.chi_squared,
         "foreground_degrees_of_freedom": subtraction.degrees_of_freedom,
         "foreground_iterations": subtraction.iterations,
         "foreground_condition_number": subtraction.condition_number,
+        "foreground_known_modes": fit.known_modes,
         "fiducial_rounds": fit.rounds,
+        "fiducial_at_rest": int(fit.at_rest),
         "signal_surviving_fraction": fit.removed.surviving_fraction,
         "bins_with_data": [int(number) for number in fit.bins],
         "covariance_draws": 0 if information.draws is None else information.draws,

@@ -1,13 +1,14 @@
 """Spectra -> foreground fit and information form, at a fiducial signal iterated to rest.
 
-The uncertainty of the signal response costs more the larger the signal is, so it enters the
-covariance at a fiducial signal: the posterior mean of the trough, found and put in again
-until it stands still.
+A foreground has a free half, projected out, and a known one, in the mean and the covariance; here they
+come together. The uncertainty of the signal response costs more the larger the signal is, so it enters
+the covariance at a fiducial signal: the posterior mean of the trough, found and put in again until it
+stands still.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import xarray as xr
@@ -17,13 +18,17 @@ from reduce.combine import Information, combine, response_modes
 from reduce.covariance import DiagonalLowRank, factor_basis
 from reduce.fast_posterior import WeightedPosterior, carried_over, fast_posterior, prior_bank
 from reduce.foreground.galaxy_ionosphere import GalaxyIonosphere
+from reduce.foreground.gaussian_process import process_modes
+from reduce.foreground.known import KnownForeground, NoFamily, smooth_safety
 from reduce.foreground.log_polynomial import LogPolynomial
 from reduce.foreground.power_series import PowerSeries
 from reduce.foreground.protocol import Family
-from reduce.subtract import RemovedSignal, Subtraction, removed_from_signal, subtract
+from reduce.removed import RemovedSignal, removed_from_signal
+from reduce.subtract import Subtraction, subtract
 from reduce.trough_model import TroughModel
 from sims.config import Foreground
 from sims.errors import InputError
+from sims.schema import SPECTRA, describe
 
 FloatArray = NDArray[np.float64]
 
@@ -50,6 +55,12 @@ class JointFit:
         Numbers of the bins that have data.
     rounds : int
         Times the fiducial signal was set.
+    at_rest : bool
+        Whether it stood still at the end.
+    known : KnownForeground or None
+        The half of the foreground that has a prior.
+    spectra : xarray.Dataset
+        What was fitted: the bins that have data, the known foreground's modes last among theirs.
     """
 
     subtraction: Subtraction
@@ -59,19 +70,35 @@ class JointFit:
     fiducial_signal_k: FloatArray
     bins: NDArray[np.int64]
     rounds: int
+    at_rest: bool
+    known: KnownForeground | None
+    spectra: xr.Dataset
+
+    @property
+    def known_modes(self) -> int:
+        """How many of the modes, the last ones, are the foreground's."""
+        return 0 if self.known is None else len(self.known.modes_k)
 
 
 def family_from(settings: Foreground, frequency_mhz: FloatArray) -> Family:
-    """Foreground family as configured, scaled to the band of these channels."""
+    """The free half of the foreground as configured, scaled to the band of these channels."""
     low, high = float(frequency_mhz[0]), float(frequency_mhz[-1])
-    if settings.family == "log-polynomial":
-        return LogPolynomial(settings.terms, low, high)
+    if settings.family == "ensemble":
+        return NoFamily()
+    if settings.family in ("log-polynomial", "gaussian-process"):
+        return LogPolynomial(settings.free_terms, low, high)
     if settings.family == "galaxy-ionosphere":
-        return GalaxyIonosphere(settings.terms, settings.index, low, high)
-    return PowerSeries(settings.terms, settings.index, float(np.sqrt(low * high)), low, high)
+        return GalaxyIonosphere(settings.free_terms, settings.galaxy_index, low, high)
+    return PowerSeries(settings.free_terms, settings.galaxy_index, float(np.sqrt(low * high)), low, high)
 
 
-def joint_fit(spectra: xr.Dataset, settings: Foreground, model: TroughModel, rng: np.random.Generator) -> JointFit:
+def joint_fit(
+    spectra: xr.Dataset,
+    settings: Foreground,
+    model: TroughModel,
+    rng: np.random.Generator,
+    ensemble: KnownForeground | None = None,
+) -> JointFit:
     """Subtract the foreground from all bins and put what is left into the information form.
 
     Parameters
@@ -82,6 +109,9 @@ def joint_fit(spectra: xr.Dataset, settings: Foreground, model: TroughModel, rng
     model : TroughModel
         Its posterior mean is the fiducial signal.
     rng : numpy.random.Generator
+    ensemble : KnownForeground, optional
+        Of all bins of `spectra`; needed where `settings` asks for one. What the spectra's own modes
+        say of the numbers that were drawn for it must not be among them still.
 
     Returns
     -------
@@ -103,30 +133,40 @@ def joint_fit(spectra: xr.Dataset, settings: Foreground, model: TroughModel, rng
     fiducial_k = bank.signal_k.mean(axis=0)
     data = {
         "frequency_mhz": frequency,
-        "temperature_k": chosen["antenna_temperature_k"].values,
         "noise_variance_k2": chosen["noise_variance"].values,
         "good": good[bins],
         "family": family,
     }
-    first = subtract(**data, modes_k=np.zeros((*good[bins].shape, 0)))
+    measured_k = chosen["antenna_temperature_k"].values
+    known = known_foreground(chosen, settings, ensemble, bins)
+    mean_k = np.zeros_like(measured_k) if known is None else known.mean_k
+    first = subtract(**data, temperature_k=measured_k - mean_k, modes_k=np.zeros((*good[bins].shape, 0)))
+    if settings.family == "gaussian-process":
+        assert settings.amplitude is not None
+        assert settings.length is not None
+        known = process_modes(
+            first.foreground_k, frequency, chosen["noise_variance"].values, settings.amplitude, settings.length
+        )
+    chosen = chosen if known is None else with_known_modes(chosen, known)
     rounds = 0
     last: tuple[Information, WeightedPosterior] | None = None
     while True:
         rounds += 1
-        subtraction = subtract(**data, modes_k=beyond_foreground_k(covariance_modes_k(chosen, fiducial_k), first))
+        modes_k = beyond_foreground_k(covariance_modes_k(chosen, fiducial_k), first)
+        subtraction = subtract(**data, temperature_k=measured_k - mean_k, modes_k=modes_k)
         information = combine(
             residual_k=subtraction.residual_k,
             covariance=subtraction.covariance,
             basis=subtraction.basis,
             signal_response=chosen["signal_response"].values,
             good=good[bins],
-            draws=None,
+            draws=None if known is None else known.draws,
         )
         carried = None if last is None else carried_over(last[1], last[0], information, model, rng)
         posterior = carried or fast_posterior(information, model, bank, rng)
         last = (information, posterior)
         found_k = posterior.weight @ model.signal_k(posterior.parameters)
-        at_rest = "response_modes" not in chosen or np.abs(found_k - fiducial_k).max() < AT_REST_K
+        at_rest = "response_modes" not in chosen or bool(np.abs(found_k - fiducial_k).max() < AT_REST_K)
         if at_rest or rounds == MOST_ROUNDS:
             break
         fiducial_k = found_k
@@ -136,8 +176,39 @@ def joint_fit(spectra: xr.Dataset, settings: Foreground, model: TroughModel, rng
         family=family,
         signal_response=chosen["signal_response"].values,
         signal_k=found_k,
+        known_modes=0 if known is None else len(known.modes_k),
     )
-    return JointFit(subtraction, information, removed, posterior, fiducial_k, bins, rounds)
+    whole = replace(subtraction, foreground_k=subtraction.foreground_k + mean_k)
+    return JointFit(whole, information, removed, posterior, fiducial_k, bins, rounds, at_rest, known, chosen)
+
+
+def known_foreground(
+    spectra: xr.Dataset, settings: Foreground, ensemble: KnownForeground | None, bins: NDArray[np.int64]
+) -> KnownForeground | None:
+    """The ensemble for these bins, with the small polynomial that stands beside it; None without one."""
+    if settings.family != "ensemble":
+        return None
+    if ensemble is None:
+        raise InputError('foreground.family = "ensemble": no ensemble was given')
+    own = KnownForeground(ensemble.mean_k[bins], ensemble.modes_k[:, bins], ensemble.response[:, bins], ensemble.draws)
+    if settings.safety_terms is None:
+        return own
+    assert settings.safety_sd is not None
+    frequency = spectra["frequency_mhz"].values
+    return own.beside(smooth_safety(own.mean_k, frequency, settings.safety_terms, settings.safety_sd))
+
+
+def with_known_modes(spectra: xr.Dataset, known: KnownForeground) -> xr.Dataset:
+    """Spectra whose modes are their own and then those of the known foreground."""
+    modes_k, response = known.modes_k, known.response
+    if "systematic_modes" in spectra:
+        before = spectra["systematic_modes"].values
+        beside = spectra["response_modes"].values if "response_modes" in spectra else np.zeros_like(before)
+        modes_k, response = np.concatenate([before, modes_k]), np.concatenate([beside, response])
+    found = spectra.drop_vars(["systematic_modes", "response_modes"], errors="ignore").assign(
+        systematic_modes=(("mode", "bin", "channel"), modes_k), response_modes=(("mode", "bin", "channel"), response)
+    )
+    return describe(found, SPECTRA)
 
 
 def beyond_foreground_k(modes_k: FloatArray, fit: Subtraction) -> FloatArray:

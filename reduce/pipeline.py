@@ -14,9 +14,20 @@ import xarray as xr
 
 from reduce.binning import bin_recording, mean_by_bin
 from reduce.chromaticity import PASSES, corrected
+from reduce.ensemble import (
+    STREAM,
+    check_campaign,
+    drawn_paths,
+    drawn_spectra,
+    known_from,
+    packed_ensemble,
+    spread,
+    without_drawn,
+)
 from reduce.handoff import bundle, combined_spectrum_text, information_from
 from reduce.joint_fit import joint_fit
 from reduce.knowledge_modes import engine_runs, knowledge_modes
+from reduce.redraw import redrawer
 from reduce.report.plots import plots
 from reduce.report.summary import summary
 from reduce.runner import Made, Outcome, Products, Progress, Stage, Tools, run_stages
@@ -26,6 +37,7 @@ from reduce.turning_points import ENSEMBLES, sample_posterior, summarise
 from sims.campaign import engine_passes, observe
 from sims.config import FORWARD_SECTIONS, Config, FitConfig
 from sims.config_load import load_config, load_fit_config
+from sims.errors import InputError
 from sims.products import sha256_of
 from sims.schema import SPECTRA, TRUTH, describe
 from sims.streams import stream
@@ -63,18 +75,41 @@ def observe_campaign(products: Products, config: FitConfig, tools: Tools) -> Mad
     return {"spectra.nc": describe(spectra, SPECTRA), "truth.nc": describe(binned, TRUTH)}
 
 
+def draw_ensemble(products: Products, config: FitConfig, tools: Tools) -> Made:
+    """Simulated campaigns over all that is uncertain -> mean and modes of the foreground."""
+    assert isinstance(config, Config)
+    assert config.foreground.draws is not None
+    spectra = products.dataset("spectra.nc")
+    check_campaign(spectra, config)
+    ready = redrawer(config, tools.progress)
+    with tools.progress("drawing the ensemble", config.foreground.draws) as advance:
+        drawn = drawn_spectra(ready, STREAM, range(config.foreground.draws), advance)
+    found = spread(drawn, np.where(spectra["flag"].values == 0, spectra["noise_variance"].values, np.nan))
+    tools.note(
+        f"ensemble: {found.draws} draws of {', '.join(drawn_paths(config))}; {len(found.size_of_noise)} modes, the "
+        f"largest {found.size_of_noise[0]:.3g} times the noise, {int((found.size_of_noise > 1.0).sum())} above it; "
+        f"variance times {found.inflation:.4f} for the number of draws"
+    )
+    return {"ensemble.nc": packed_ensemble(found, config)}
+
+
 def subtract_foreground(products: Products, config: FitConfig, tools: Tools) -> Made:
-    """Spectra -> bundle: smooth foreground out of all bins together, the rest in the information form."""
+    """Spectra -> bundle: foreground out of all bins together, the rest in the information form."""
     spectra = products.dataset("spectra.nc")
     model = _model(spectra, config)
-    fit = joint_fit(spectra, config.foreground, model, stream(config.run.seed, "joint-fit"))
+    ensemble = None
+    if config.foreground.family == "ensemble":
+        assert isinstance(config, Config)
+        ensemble, spectra = known_from(products.dataset("ensemble.nc")), without_drawn(spectra, config)
+    fit = joint_fit(spectra, config.foreground, model, stream(config.run.seed, "joint-fit"), ensemble)
     sub = fit.subtraction
     tools.note(
-        f"foreground: {config.foreground.family}, {config.foreground.terms} terms a bin, {len(fit.bins)} bins; "
+        f"foreground: {config.foreground.family}, {config.foreground.free_terms} free terms a bin and "
+        f"{fit.known_modes} modes with a prior, {len(fit.bins)} bins; "
         f"chi-squared {sub.chi_squared:.1f} of {sub.degrees_of_freedom}, condition number {sub.condition_number:.2g}, "
         f"{sub.iterations} iterations"
     )
-    return {"bundle.nc": bundle(spectra, fit)}
+    return {"bundle.nc": bundle(fit)}
 
 
 def find_turning_points(products: Products, config: FitConfig, tools: Tools) -> Made:
@@ -101,66 +136,77 @@ def report(products: Products, config: FitConfig, tools: Tools) -> Made:
     return {**pictures, "summary.txt": summary(products, config)}
 
 
-_REDUCTION = (
-    Stage(
+_OBSERVE = Stage(
+    name="observe",
+    title="observe the mock campaign",
+    sections=("run", *FORWARD_SECTIONS),
+    needs=(),
+    makes=("spectra.nc", "truth.nc"),
+    work=observe_campaign,
+)
+_ENSEMBLE = Stage(
+    name="ensemble",
+    title="draw the ensemble of foregrounds",
+    sections=("run", "foreground", *FORWARD_SECTIONS),
+    needs=("spectra.nc",),
+    makes=("ensemble.nc",),
+    work=draw_ensemble,
+)
+_TURNING_POINTS = Stage(
+    name="turning-points",
+    title="find the turning points",
+    sections=("run", "turning_points"),
+    needs=("bundle.nc",),
+    makes=("posterior.nc", "turning_points.json"),
+    work=find_turning_points,
+)
+_SPECTRUM = Stage(
+    name="spectrum",
+    title="write the combined spectrum",
+    sections=(),
+    needs=("bundle.nc",),
+    makes=("combined_spectrum.txt",),
+    work=write_spectrum,
+)
+
+
+def _subtract(more: tuple[str, ...]) -> Stage:
+    return Stage(
         name="subtract",
         title="subtract the foreground",
         sections=("run", "foreground", "turning_points"),
-        needs=("spectra.nc",),
+        needs=("spectra.nc", *more),
         makes=("bundle.nc",),
         work=subtract_foreground,
-    ),
-    Stage(
-        name="turning-points",
-        title="find the turning points",
-        sections=("run", "turning_points"),
-        needs=("bundle.nc",),
-        makes=("posterior.nc", "turning_points.json"),
-        work=find_turning_points,
-    ),
-    Stage(
-        name="spectrum",
-        title="write the combined spectrum",
-        sections=(),
-        needs=("bundle.nc",),
-        makes=("combined_spectrum.txt",),
-        work=write_spectrum,
-    ),
-)
+    )
 
-STAGES = (
-    Stage(
-        name="observe",
-        title="observe the mock campaign",
-        sections=("run", *FORWARD_SECTIONS),
-        needs=(),
-        makes=("spectra.nc", "truth.nc"),
-        work=observe_campaign,
-    ),
-    *_REDUCTION,
-    Stage(
+
+def _report(more: tuple[str, ...]) -> Stage:
+    return Stage(
         name="report",
         title="draw and sum up",
         sections=("run", "foreground", "turning_points"),
-        needs=("spectra.nc", "truth.nc", "bundle.nc", "posterior.nc", "turning_points.json"),
+        needs=("spectra.nc", *more, "bundle.nc", "posterior.nc", "turning_points.json"),
         makes=("spectra.png", "residuals.png", "trough.png", "turning_points.png", "transfer.png", "summary.txt"),
         work=report,
-    ),
-)
+    )
+
+
+STAGES = (_OBSERVE, _subtract(()), _TURNING_POINTS, _SPECTRUM, _report(("truth.nc",)))
 """The whole way of a mock campaign."""
 
-FIT_STAGES = (
-    *_REDUCTION,
-    Stage(
-        name="report",
-        title="draw and sum up",
-        sections=("run", "foreground", "turning_points"),
-        needs=("spectra.nc", "bundle.nc", "posterior.nc", "turning_points.json"),
-        makes=("spectra.png", "residuals.png", "trough.png", "turning_points.png", "transfer.png", "summary.txt"),
-        work=report,
-    ),
-)
+ENSEMBLE_STAGES = (
+    _OBSERVE, _ENSEMBLE, _subtract(("ensemble.nc",)), _TURNING_POINTS, _SPECTRUM, _report(("truth.nc", "ensemble.nc")),
+)  # fmt: skip
+"""The same with simulated campaigns as the foreground."""
+
+FIT_STAGES = (_subtract(()), _TURNING_POINTS, _SPECTRUM, _report(()))
 """The way of spectra that somebody measured."""
+
+ENSEMBLE_FIT_STAGES = (
+    _ENSEMBLE, _subtract(("ensemble.nc",)), _TURNING_POINTS, _SPECTRUM, _report(("ensemble.nc",)),
+)  # fmt: skip
+"""The same with simulated campaigns as the foreground."""
 
 
 def run(config_path: Path, out: Path, *, update: bool = False, progress: Progress | None = None) -> Outcome:
@@ -188,7 +234,9 @@ def run(config_path: Path, out: Path, *, update: bool = False, progress: Progres
     InputError
         If the configuration or the folder is not fit for it.
     """
-    return run_stages(STAGES, load_config(config_path), out, update=update, progress=progress, given={})
+    config = load_config(config_path)
+    stages = ENSEMBLE_STAGES if config.foreground.family == "ensemble" else STAGES
+    return run_stages(stages, config, out, update=update, progress=progress, given={})
 
 
 def fit(
@@ -225,10 +273,17 @@ def fit(
         If spectra, configuration or folder are not fit for it.
     """
     config = load_fit_config(config_path)
+    ensemble = config.foreground.family == "ensemble"
+    if ensemble and not isinstance(config, Config):
+        raise InputError(
+            f'{config_path}: foreground.family = "ensemble" simulates campaigns: it needs the tables of a whole one, '
+            f"{', '.join(FORWARD_SECTIONS)} (knowledge above all)"
+        )
     spectra = read_spectra(spectra_path, covariance_path)
     files = [spectra_path] + ([] if covariance_path is None else [covariance_path])
     spectra.attrs["input_sha256"] = [sha256_of(path) for path in files]
-    return run_stages(FIT_STAGES, config, out, update=update, progress=progress, given={"spectra.nc": spectra})
+    stages = ENSEMBLE_FIT_STAGES if ensemble else FIT_STAGES
+    return run_stages(stages, config, out, update=update, progress=progress, given={"spectra.nc": spectra})
 
 
 def _model(dataset: xr.Dataset, config: FitConfig) -> TroughModel:

@@ -4,12 +4,14 @@ An ensemble needs a thousand campaigns. The mean beam of each bin on the sky (`s
 makes a changed sky one dot product, exactly. Where a number of beam, vantage or surface is
 uncertain too, the mean beam is tabulated at five values of it and interpolated between. What two
 of them do together beyond the sum of each is tabulated where a few samples show that a smooth
-foreground would not take it away; what three do is left out.
+foreground would not take it away; what three do is left out. Many skies at once are one matrix
+product for each frequency, so that the tables are read from memory once for all of them.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from contextlib import AbstractContextManager
 from dataclasses import dataclass
 
 import numpy as np
@@ -26,13 +28,14 @@ from sims.draws import leaf_value, with_leaves
 from sims.errors import InputError
 from sims.frequency import channel_grid, chebyshev_nodes_mhz, mean_expansion_matrix
 from sims.knowledge import Known
-from sims.mean_beam import MeanBeam, mean_beam
+from sims.mean_beam import mean_beam
 from sims.pixel_sum import PixelSums
 from sims.sky import AnySky, sky_from
 from sims.sky_average import Sky, at_the_antenna
 from sims.vantage import survey_geometry
 
 FloatArray = NDArray[np.float64]
+Bars = Callable[[str, int], AbstractContextManager[Callable[[int], None]]]
 NEGLIGIBLE_K = 5e-5
 ABSORBING_TERMS = 6
 SCORES = (-3.0, -1.5, 1.5, 3.0)  # of the unit normal, at which a leaf is tabulated beside its configured value
@@ -47,20 +50,20 @@ OUTSIDE_THE_SUMS = (
 
 
 @dataclass(frozen=True, eq=False)
-class Pair:
-    """What two leaves do together, tabulated at the outermost values of each.
+class Tables:
+    """Mean beams side by side, each with the values of the leaves it belongs to.
 
     Attributes
     ----------
-    first, second : int
-        Numbers of the leaves.
-    beams : tuple of tuple of MeanBeam
-        At the lower and upper value of the first (rows) and of the second.
+    on_sky : ndarray[node, beam, bin, pixel]
+        As `MeanBeam.on_sky`.
+    response, polar : ndarray[beam, bin, node]
+        As `MeanBeam`.
     """
 
-    first: int
-    second: int
-    beams: tuple[tuple[MeanBeam, ...], ...]
+    on_sky: FloatArray
+    response: FloatArray
+    polar: FloatArray
 
 
 @dataclass(frozen=True, eq=False)
@@ -81,11 +84,10 @@ class Redrawer:
         Paths of the leaves that move the beam on the sky.
     values : tuple of ndarray[point]
         For each leaf the values tabulated, the configured one first.
-    nominal : MeanBeam
-    moved : tuple of tuple of MeanBeam
-        For each leaf the mean beams at its values but the first.
-    pairs : tuple of Pair
-        Leaves whose common effect counts.
+    pairs : tuple of (int, int)
+        Numbers of leaves whose common effect counts: tabulated at the outermost values of both.
+    tables : Tables
+        The nominal beam; then for each leaf those at its other values; then four for each pair.
     """
 
     config: Config
@@ -94,49 +96,59 @@ class Redrawer:
     to_channels: FloatArray
     leaves: tuple[str, ...]
     values: tuple[FloatArray, ...]
-    nominal: MeanBeam
-    moved: tuple[tuple[MeanBeam, ...], ...]
-    pairs: tuple[Pair, ...]
+    pairs: tuple[tuple[int, int], ...]
+    tables: Tables
 
-    def spectra(self, config: Config, sky: Sky) -> tuple[FloatArray, FloatArray]:
-        """Binned spectra of a changed configuration under a changed sky, as the engine would give them.
+    def spectra(self, changed: Sequence[tuple[Config, Sky]]) -> tuple[FloatArray, FloatArray]:
+        """Binned spectra of changed configurations under changed skies, as the engine would give them.
 
         Parameters
         ----------
-        config : Config
-            Differs from the nominal one in leaves of ``[knowledge]`` alone.
-        sky : Sky
-            Of the nominal resolution.
+        changed : sequence of (Config, Sky)
+            Configurations that differ from the nominal one in leaves of ``[knowledge]`` alone, and
+            skies of the nominal resolution. Each takes nodes times pixels numbers of memory.
 
         Returns
         -------
-        antenna_temperature_k, signal_response : ndarray[bin, channel]
+        antenna_temperature_k, signal_response : ndarray[draw, bin, channel]
         """
-        sums = self._sums(config, np.ascontiguousarray(sky.brightness_k(self.nodes_mhz)))
-        temperature, response = at_the_antenna(antenna_from(config.beam), config.surface, self.nodes_mhz, sums)
-        return temperature @ self.to_channels, response @ self.to_channels
+        shares = np.array([self.shares(config) for config, _ in changed])
+        sky_k = self._sky_sums(shares, [sky for _, sky in changed])
+        response, polar = (np.einsum("dB,Bbn->dbn", shares, part) for part in (self.tables.response, self.tables.polar))
+        rows = []
+        for number, (config, _) in enumerate(changed):
+            sums = PixelSums(sky_k[number], response[number], polar[number], np.ones_like(sky_k[number]))
+            rows.append(at_the_antenna(antenna_from(config.beam), config.surface, self.nodes_mhz, sums))
+        return (
+            np.array([temperature for temperature, _ in rows]) @ self.to_channels,
+            np.array([share for _, share in rows]) @ self.to_channels,
+        )
 
-    def _sums(self, config: Config, brightness_k: FloatArray) -> PixelSums:
+    def shares(self, config: Config) -> FloatArray:
+        """What share of each tabulated beam makes the mean beam of a configuration: ndarray[beam]; sums to one."""
         at = [leaf_value(config, path) for path in self.leaves]
         singles = [lagrange(values, value) for values, value in zip(self.values, at, strict=True)]
         whole = 1.0 + sum(float(share[0]) - 1.0 for share in singles)
-        parts: list[tuple[float, MeanBeam]] = []
-        for pair in self.pairs:
-            first, second = (lagrange(_ends(self.values[n]), at[n])[1:] for n in (pair.first, pair.second))
+        doubles: list[FloatArray] = []
+        for one, two in self.pairs:
+            first, second = (lagrange(_ends(self.values[n]), at[n])[1:] for n in (one, two))
             both = np.outer(first, second)
             # C(x, y) = K(x, y) - K(x) - K(y) + K vanishes where either is as configured.
-            parts += [(float(both[a, b]), pair.beams[a][b]) for a in (0, 1) for b in (0, 1)]
-            singles[pair.first][[1, -1]] -= both.sum(axis=1)
-            singles[pair.second][[1, -1]] -= both.sum(axis=0)
+            doubles.append(both.ravel())
+            singles[one][[1, -1]] -= both.sum(axis=1)
+            singles[two][[1, -1]] -= both.sum(axis=0)
             whole += float(both.sum())
-        for share, beams in zip(singles, self.moved, strict=True):
-            parts += list(zip(share[1:].tolist(), beams, strict=True))
-        found = [(share, beam.sums(brightness_k)) for share, beam in [(whole, self.nominal), *parts] if share != 0.0]
-        sky_k, response, polar = (
-            np.sum([share * getattr(sums, name) for share, sums in found], axis=0)
-            for name in ("sky_k", "response", "polar")
-        )
-        return PixelSums(sky_k, response, polar, np.ones_like(sky_k))
+        return np.concatenate([[whole], *(share[1:] for share in singles), *doubles])
+
+    def _sky_sums(self, shares: FloatArray, skies: Sequence[Sky]) -> FloatArray:
+        """Sums over pixels ndarray[draw, bin, node]."""
+        nodes, beams, bins, pixels = self.tables.on_sky.shape
+        brightness_k = np.array([sky.brightness_k(self.nodes_mhz) for sky in skies])
+        sums = np.empty((len(skies), bins, nodes))
+        for node, table in enumerate(self.tables.on_sky):
+            each = brightness_k[:, :, node] @ table.reshape(beams * bins, pixels).T
+            sums[:, :, node] = np.einsum("dB,dBb->db", shares, each.reshape(len(skies), beams, bins))
+        return sums
 
 
 def lagrange(nodes: FloatArray, at: float) -> FloatArray:
@@ -168,15 +180,15 @@ def moving_leaves(config: Config) -> list[Known]:
     ]
 
 
-def redrawer(config: Config, advance: Callable[[int, int], None]) -> Redrawer:
+def redrawer(config: Config, progress: Bars) -> Redrawer:
     """Prepare the redraws of a campaign.
 
     Parameters
     ----------
     config : Config
         Nominal configuration.
-    advance : callable
-        Told the number of mean beams done, of how many: `advance(done, total)`.
+    progress : callable
+        Makes progress bars: `progress(title, total)` is a context that gives what is told of work done.
 
     Returns
     -------
@@ -205,16 +217,21 @@ def redrawer(config: Config, advance: Callable[[int, int], None]) -> Redrawer:
     weight = geometry["integration_s"].values
 
     pairs = pairs_that_count(config, sky, few, paths, values)
-    total, done = 1 + sum(len(row) - 1 for row in values) + 4 * len(pairs), [0]
-
-    def averaged(moves: dict[str, float]) -> MeanBeam:
-        changed = with_leaves(config, moves)
-        scene = scene_of(changed, sky, geometry_like(changed, geometry, config))
-        found = mean_beam(scene, nodes_mhz, label, weight, config.bins.count, _quiet)
-        done[0] += 1
-        advance(done[0], total)
-        return found
-
+    moves = tabulated_moves(paths, values, pairs)
+    pixels = 12 * sky.nside**2
+    tables = Tables(
+        on_sky=np.empty((nodes, len(moves), config.bins.count, pixels)),
+        response=np.empty((len(moves), config.bins.count, nodes)),
+        polar=np.empty((len(moves), config.bins.count, nodes)),
+    )
+    with progress("mean beams on the sky", len(moves)) as advance:
+        for number, move in enumerate(moves):
+            changed = with_leaves(config, move)
+            scene = scene_of(changed, sky, geometry_like(changed, geometry, config))
+            beam = mean_beam(scene, nodes_mhz, label, weight, config.bins.count, _quiet)
+            tables.on_sky[:, number] = np.moveaxis(beam.on_sky, 2, 0)
+            tables.response[number], tables.polar[number] = beam.response, beam.polar
+            advance(1)
     return Redrawer(
         config=config,
         sky=sky,
@@ -222,22 +239,24 @@ def redrawer(config: Config, advance: Callable[[int, int], None]) -> Redrawer:
         to_channels=mean_expansion_matrix(grid, nodes).T,
         leaves=paths,
         values=tuple(values),
-        nominal=averaged({}),
-        moved=tuple(
-            tuple(averaged({path: float(value)}) for value in row[1:]) for path, row in zip(paths, values, strict=True)
-        ),
-        pairs=tuple(
-            Pair(
-                one,
-                two,
-                tuple(
-                    tuple(averaged({paths[one]: float(x), paths[two]: float(y)}) for y in _ends(values[two])[1:])
-                    for x in _ends(values[one])[1:]
-                ),
-            )
-            for one, two in pairs
-        ),
+        pairs=tuple(pairs),
+        tables=tables,
     )
+
+
+def tabulated_moves(
+    paths: tuple[str, ...], values: list[FloatArray], pairs: list[tuple[int, int]]
+) -> list[dict[str, float]]:
+    """What is moved in each tabulated beam: nothing; one leaf at each of its values; both of each pair."""
+    moves: list[dict[str, float]] = [{}]
+    moves += [{path: float(value)} for path, row in zip(paths, values, strict=True) for value in row[1:]]
+    moves += [
+        {paths[one]: float(x), paths[two]: float(y)}
+        for one, two in pairs
+        for x in _ends(values[one])[1:]
+        for y in _ends(values[two])[1:]
+    ]
+    return moves
 
 
 def pairs_that_count(

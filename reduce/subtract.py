@@ -5,7 +5,7 @@ couple the bins, so the fit is joint. The rows of all good (bin, channel) pairs 
 the augmented system of `reduce.covariance` with its modes eliminated) and solved by QR; normal equations
 never appear. A family that is not linear is iterated by Gauss-Newton steps on the joint problem.
 
-A smooth foreground also takes part of any signal; `removed_from_signal` says how much.
+A smooth foreground also takes part of any signal; `reduce.removed` says how much.
 """
 
 from __future__ import annotations
@@ -66,27 +66,6 @@ class Subtraction:
     degrees_of_freedom: int
     iterations: int
     condition_number: float
-
-
-@dataclass(frozen=True, eq=False)
-class RemovedSignal:
-    """What a foreground fit leaves of a signal.
-
-    Parameters
-    ----------
-    left_k : ndarray[bin, channel]
-        Residual, K, that the signal alone leaves after the same joint projection; NaN where flagged.
-    surviving_fraction : float
-        Whitened length of what is left over that of the signal, 0 to 1: the square root of the
-        share of its squared signal-to-noise ratio that no foreground can imitate.
-    second_order_k : ndarray[bin, channel]
-        What the tangent neglects, K: the change of the foreground by the coefficients that imitate
-        the signal, minus its linear part. For a log polynomial delta^2 / 2T, delta the imitation.
-    """
-
-    left_k: NDArray[np.float64]
-    surviving_fraction: float
-    second_order_k: NDArray[np.float64]
 
 
 def _check(
@@ -280,66 +259,3 @@ def subtract(
         iterations=iteration,
         condition_number=factor.condition_number,
     )
-
-
-def removed_from_signal(
-    subtraction: Subtraction,
-    *,
-    frequency_mhz: NDArray[np.float64],
-    family: Family,
-    signal_response: NDArray[np.float64],
-    signal_k: NDArray[np.float64],
-) -> RemovedSignal:
-    """What the foreground fit leaves of a signal, to first order in the signal.
-
-    Parameters
-    ----------
-    subtraction : Subtraction
-        The fit.
-    frequency_mhz : ndarray[channel] or ndarray[bin, channel]
-        Frequency, MHz, as fitted.
-    family : Family
-        The family, as fitted.
-    signal_response : ndarray[bin, channel]
-        w, the share of a signal filling the sky that reaches each bin.
-    signal_k : ndarray[channel]
-        Signal, K.
-
-    Returns
-    -------
-    RemovedSignal
-        Residual of the signal, surviving fraction, and what the tangent neglects.
-
-    Raises
-    ------
-    InputError
-        If shapes disagree, or the signal is zero or not finite on the good samples.
-    """
-    good, covariance = subtraction.good, subtraction.covariance
-    response, signal = np.asarray(signal_response, float), np.asarray(signal_k, float)
-    if response.shape != good.shape or signal.shape != good.shape[1:]:
-        raise InputError(
-            f"signal_response and signal_k: got shapes {response.shape} and {signal.shape}; allowed are "
-            f"{good.shape} [bin, channel] and {good.shape[1:]} [channel]"
-        )
-    seen = (response * signal)[good]
-    if not np.isfinite(seen).all() or not seen.any():
-        raise InputError("signal_response * signal_k: zero or not finite on the good samples; allowed is any signal")
-    white = covariance.whiten(seen)
-    factor = factor_basis(covariance.whiten(subtraction.basis), "foreground basis")
-    taken = factor.orthonormal.T @ white
-    shift = np.linalg.solve(factor.triangle, taken)
-    left = np.full(good.shape, np.nan)
-    left[good] = seen - subtraction.basis @ shift
-    remainder = white - factor.orthonormal @ taken
-    remainder -= factor.orthonormal @ (factor.orthonormal.T @ remainder)  # the second pass clears the rounding
-    frequency = np.broadcast_to(np.asarray(frequency_mhz, float), good.shape)
-    moves = shift.reshape(subtraction.coefficients.shape)
-    second_order = np.array(
-        [
-            family.evaluate(f, a + move) - family.evaluate(f, a) - family.basis(f, a) @ move
-            for f, a, move in zip(frequency, subtraction.coefficients, moves, strict=True)
-        ]
-    )
-    fraction = float(np.linalg.norm(remainder) / np.linalg.norm(white))
-    return RemovedSignal(left_k=left, surviving_fraction=fraction, second_order_k=second_order)

@@ -117,14 +117,36 @@ def engine_passes(config: settings.Config) -> int:
 
 def true_sky(config: settings.Config, truth: Draw, nominal: AnySky) -> AnySky:
     """The mock's true sky: drawn scalars, and drawn fields where ``[knowledge]`` has them."""
-    sky = moved_sky(nominal, config.sky, truth.config.sky)
     if config.run.truth != "drawn":
-        return sky
+        return moved_sky(nominal, config.sky, truth.config.sky)
+    return drawn_sky(config, truth, nominal, "truth")
+
+
+def drawn_sky(config: settings.Config, drawn: Draw, nominal: AnySky, name: str) -> AnySky:
+    """The sky of one draw, its fields drawn too.
+
+    Parameters
+    ----------
+    config : Config
+        Nominal configuration, for its seed and ``[knowledge]``.
+    drawn : Draw
+        Its scalars, and the number of the draw.
+    nominal : AnySky
+        The configured sky.
+    name : str
+        Name of the stream that `drawn` came from.
+
+    Returns
+    -------
+    AnySky
+    """
+    sky = moved_sky(nominal, config.sky, drawn.config.sky)
     seed, known = config.run.seed, config.knowledge
     if known.index_field is not None:
-        sky = sky.with_index_field(index_error(known.index_field, sky.nside, stream(seed, "truth/index-field")))
+        rng = stream(seed, f"{name}/index-field", drawn.index)
+        sky = sky.with_index_field(index_error(known.index_field, sky.nside, rng))
     if known.map_noise is not None:
-        rng = stream(seed, "truth/map-noise")
+        rng = stream(seed, f"{name}/map-noise", drawn.index)
         sky = sky.with_map_noise(known.map_noise.sd_k * rng.standard_normal(len(sky.directions)))
     return sky
 

@@ -7,7 +7,6 @@ it needs. The forward tables stand in files of their own (`sims.config_sky`, ...
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from itertools import accumulate
 from typing import Any, Literal, Self
 
 import numpy as np
@@ -25,6 +24,7 @@ from sims.config_forward import (
     TableSignal,
     TurningPointSignal,
 )
+from sims.config_reduction import Foreground, PointPrior, TurningPoints
 from sims.config_sky import HealpixSky, ImageSky, InventedSky, Sky
 from sims.config_vantage import (
     Boresight,
@@ -41,7 +41,7 @@ from sims.config_vantage import (
     VerticalBoresight,
 )
 from sims.knowledge import Knowledge
-from sims.quantities import Kelvin, Mhz, MhzRange, MillikelvinRange, Section
+from sims.quantities import Kelvin, Mhz, Section
 
 __all__ = [
     "FORWARD_SECTIONS",
@@ -96,67 +96,6 @@ class Run(Section):
     name: str = Field(min_length=1)
     seed: int = Field(ge=0)
     truth: Literal["nominal", "drawn"] = "nominal"
-
-
-class Foreground(Section):
-    """``[foreground]``: the smooth family taken away from each bin, and how many terms of it."""
-
-    family: Literal["log-polynomial", "power-series", "galaxy-ionosphere"]
-    terms: int = Field(ge=1, le=20)
-    index: float = Field(default=2.5, ge=1.0, le=4.0)
-
-    @model_validator(mode="after")
-    def _enough(self) -> Self:
-        if self.family == "galaxy-ionosphere" and self.terms < 3:
-            raise ValueError(f"terms must be at least 3 here, two of them the ionosphere's (got {self.terms})")
-        return self
-
-
-class PointPrior(Section):
-    """Bounds of a turning point: uniform within them."""
-
-    frequency_mhz: MhzRange
-    temperature_mk: MillikelvinRange
-
-    @model_validator(mode="after")
-    def _rising(self) -> Self:
-        for name, bounds in (("frequency", self.frequency_mhz), ("temperature", self.temperature_mk)):
-            if bounds[1] <= bounds[0]:
-                raise ValueError(f"{name} must rise from lower to upper bound, got {list(bounds)}")
-        if self.frequency_mhz[0] <= 0:
-            raise ValueError(f"frequency must be positive, got {list(self.frequency_mhz)} MHz")
-        return self
-
-
-class TurningPoints(Section):
-    """``[turning_points]``: fixed ends A and E, priors of B, C and D, and the sampler's effort."""
-
-    a: Point
-    e: Point
-    b: PointPrior
-    c: PointPrior
-    d: PointPrior
-    walkers: int = Field(default=160, ge=64, le=4096)
-    steps: int = Field(default=1600, ge=100, le=1_000_000)
-
-    @model_validator(mode="after")
-    def _room(self) -> Self:
-        lower = [self.a.frequency_mhz, *(point.frequency_mhz[0] for point in (self.b, self.c, self.d))]
-        upper = [*(point.frequency_mhz[1] for point in (self.b, self.c, self.d)), self.e.frequency_mhz]
-        problems = []
-        if self.b.frequency_mhz[0] < self.a.frequency_mhz:
-            problems.append("b must start above a")
-        if self.d.frequency_mhz[1] > self.e.frequency_mhz:
-            problems.append("d must end below e")
-        if any(low >= high for low, high in zip(accumulate(lower, max), upper, strict=True)):
-            problems.append("the ranges leave no room for a < b < c < d < e in frequency")
-        if self.c.temperature_mk[0] >= min(self.b.temperature_mk[1], self.d.temperature_mk[1]):
-            problems.append("the ranges leave no room for c below b and d in temperature")
-        if self.walkers % 4:
-            problems.append(f"walkers must be a multiple of 4 (two ensembles of an even number), got {self.walkers}")
-        if problems:
-            raise ValueError("; ".join(problems))
-        return self
 
 
 class Correction(Section):
@@ -311,10 +250,10 @@ def _channels_and_foreground(channels: Channels, foreground: Foreground) -> list
     for lower, upper in channels.masks_mhz:
         masked |= (edges[1:] > lower) & (edges[:-1] < upper)
     left = channels.count - int(masked.sum())
-    if left > foreground.terms:
+    if left > foreground.free_terms:
         return []
     return [
-        f"foreground.terms: {foreground.terms} terms need more channels than the {left} that channels.count and "
+        f"foreground.terms: {foreground.free_terms} terms need more channels than the {left} that channels.count and "
         "channels.masks leave"
     ]
 

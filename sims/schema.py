@@ -83,6 +83,16 @@ SPECTRA: Product = {
     "chromaticity_error": Variable(("bin", "channel"), "1", "standard deviation of that factor", required=False),
 }  # fmt: skip
 
+ENSEMBLE: Product = {
+    **_CHANNELS,
+    "mean_k": Variable(("bin", "channel"), "K", "mean of the draws, as the receiver reports them"),
+    "modes_k": Variable(
+        ("mode", "bin", "channel"), "K", "independent deviations of one standard deviation, inflated for the draws"
+    ),
+    "response_modes": Variable(("mode", "bin", "channel"), "1", "change of the signal response that goes with each"),
+    "size_of_noise": Variable(("mode",), "1", "standard deviation of each mode over the noise, before inflation"),
+}  # fmt: skip
+
 TRUTH: Product = {
     **_CHANNELS,
     "signal_k": Variable(("channel",), "K", "signal that was put in"),

@@ -43,8 +43,8 @@ def test_log_likelihood_of_the_bundle_equals_that_of_all_bins(
     case: tuple[xr.Dataset, JointFit, TroughModel], tmp_path: Path
 ) -> None:
     """Reference: least squares on every bin, foregrounds free, each mode of the covariance a unit-normal nuisance."""
-    spectra, fit, model = case
-    write_product(bundle(spectra, fit), tmp_path / "bundle.nc")
+    _, fit, model = case
+    write_product(bundle(fit), tmp_path / "bundle.nc")
     packed = read_product(tmp_path / "bundle.nc", BUNDLE)
     information = information_from(packed)
     good = packed["flag"].values == 0
@@ -81,7 +81,7 @@ def test_information_form_is_its_own_square_root(case: tuple[xr.Dataset, JointFi
 
 
 def test_bundle_survives_a_round_trip(case: tuple[xr.Dataset, JointFit, TroughModel], tmp_path: Path) -> None:
-    packed = bundle(case[0], case[1])
+    packed = bundle(case[1])
     write_product(packed, tmp_path / "bundle.nc")
     again = information_from(read_product(tmp_path / "bundle.nc", BUNDLE))
     for name in ("K", "b", "R", "z"):
@@ -99,7 +99,7 @@ def test_masked_channels_carry_no_information(case: tuple[xr.Dataset, JointFit, 
 
 
 def test_combined_spectrum_says_it_is_projected(case: tuple[xr.Dataset, JointFit, TroughModel]) -> None:
-    text = combined_spectrum_text(bundle(case[0], case[1]))
+    text = combined_spectrum_text(bundle(case[1]))
     header = [line for line in text.splitlines() if line.startswith("#")]
     rows = np.loadtxt(text.splitlines())
     assert "INVENTED" in header[0]

@@ -2,18 +2,22 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+
 import numpy as np
 import pytest
 from small_campaign import CONFIGS, small_tree
 
 from reduce.binning import mean_by_bin
 from reduce.redraw import Redrawer, beyond_foreground_k, lagrange, redrawer
-from sims.campaign import geometry_like, simulate, true_sky
+from sims.campaign import drawn_sky, geometry_like, simulate, true_sky
 from sims.config import Config
 from sims.config_load import parse_config
 from sims.draws import draw
 from sims.frequency import channel_grid
 from sims.sky import moved_sky, sky_from
+from sims.sky_average import Sky
 from sims.vantage import survey_geometry
 
 
@@ -32,18 +36,32 @@ def campaign() -> Config:
     return parse_config(tree, CONFIGS)
 
 
+def one(ready: Redrawer, changed: Config, sky: Sky) -> tuple[np.ndarray, np.ndarray]:
+    """A single redraw."""
+    temperature, response = ready.spectra([(changed, sky)])
+    return temperature[0], response[0]
+
+
 @pytest.fixture(scope="module")
 def ready() -> Redrawer:
-    counted: list[tuple[int, int]] = []
-    made = redrawer(campaign(), lambda done, total: counted.append((done, total)))
-    beams = 1 + sum(len(row) for row in made.moved) + 4 * len(made.pairs)
-    assert counted == [(number + 1, beams) for number in range(beams)]
+    counted: list[int] = []
+    totals: list[int] = []
+
+    @contextmanager
+    def bar(title: str, total: int) -> Iterator[Callable[[int], None]]:
+        totals.append(total)
+        yield counted.append
+
+    made = redrawer(campaign(), bar)
+    beams = 1 + sum(len(row) - 1 for row in made.values) + 4 * len(made.pairs)
+    assert totals == [beams]
+    assert sum(counted) == beams
     return made
 
 
-def in_full(config: Config, changed: Config, sky: object) -> tuple[np.ndarray, np.ndarray]:
+def in_full(config: Config, changed: Config, sky: Sky) -> tuple[np.ndarray, np.ndarray]:
     geometry, grid = survey_geometry(config.vantage, config.observation), channel_grid(config.channels)
-    average = simulate(changed, sky, geometry_like(changed, geometry, config), grid, quiet)  # type: ignore[arg-type]
+    average = simulate(changed, sky, geometry_like(changed, geometry, config), grid, quiet)
     return (
         mean_by_bin(average.antenna_temperature_k, geometry, config.bins),
         mean_by_bin(average.signal_response, geometry, config.bins),
@@ -55,7 +73,7 @@ def test_nominal_campaign_and_changed_skies_are_exact(ready: Redrawer) -> None:
     sky = sky_from(config.sky)
     brighter = config.model_copy(update={"sky": config.sky.model_copy(update={"scale": 1.1, "zero_level_k": 2.0})})
     for changed, under in ((config, sky), (brighter, moved_sky(sky, config.sky, brighter.sky))):
-        temperature, response = ready.spectra(changed, under)
+        temperature, response = one(ready, changed, under)
         full = in_full(config, changed, under)
         # The engine's own sums, at as many nodes as a ripple needs: its tolerance of a microkelvin is what differs.
         assert np.abs(temperature - full[0]).max() < 2e-6
@@ -70,7 +88,7 @@ def test_what_acts_outside_the_sums_is_exact(ready: Redrawer) -> None:
             "surface": config.surface.model_copy(update={"temperature_k": 210.0}),
         }
     )
-    temperature, response = ready.spectra(changed, ready.sky)
+    temperature, response = one(ready, changed, ready.sky)
     full = in_full(config, changed, ready.sky)
     assert np.abs(temperature - full[0]).max() < 2e-6
     assert np.abs(response - full[1]).max() < 1e-8
@@ -82,9 +100,9 @@ def test_draw_of_everything_at_once_against_a_full_simulation(ready: Redrawer, n
     config = ready.config
     truth = draw(config, "redraw-test", number)
     sky = true_sky(config, truth, ready.sky)
-    temperature, response = ready.spectra(truth.config, sky)
+    temperature, response = one(ready, truth.config, sky)
     full = in_full(config, truth.config, sky)
-    nominal = ready.spectra(config, ready.sky)[0]
+    nominal = one(ready, config, ready.sky)[0]
     frequency = channel_grid(config.channels).centre_mhz
     difference = temperature - full[0]
     # What two leaves do together is left out: tilt and length change the mean by parts in 10^3 and 10^4 of 10^3 K.
@@ -95,14 +113,24 @@ def test_draw_of_everything_at_once_against_a_full_simulation(ready: Redrawer, n
 
 def test_each_draw_can_be_made_again_alone(ready: Redrawer) -> None:
     config = ready.config
-    one, again = draw(config, "ensemble", 7), draw(config, "ensemble", 7)
-    assert one.values == again.values
-    sky = moved_sky(ready.sky, config.sky, one.config.sky)
-    assert np.array_equal(ready.spectra(one.config, sky)[0], ready.spectra(again.config, sky)[0])
+    draws = [draw(config, "ensemble", number) for number in (5, 6, 7)]
+    together, response = ready.spectra(
+        [(each.config, drawn_sky(config, each, ready.sky, "ensemble")) for each in draws]
+    )
+    again = draw(config, "ensemble", 7)
+    assert again.values == draws[2].values
+    alone = ready.spectra([(again.config, drawn_sky(config, again, ready.sky, "ensemble"))])
+    # One matrix product sums in another order than the other: 1e-13 of 10^4 K.
+    assert np.abs(together[2] - alone[0][0]).max() < 1e-8
+    assert np.abs(response[2] - alone[1][0]).max() < 1e-12
+    # The fields differ from draw to draw, and from those of another name.
+    assert np.abs(together[1] - together[0]).max() > 1.0
+    other = ready.spectra([(again.config, drawn_sky(config, again, ready.sky, "truth"))])
+    assert np.abs(other[0] - alone[0]).max() > 1.0
 
 
 def test_pairs_are_tabulated_only_where_they_count(ready: Redrawer) -> None:
-    named = {frozenset((ready.leaves[pair.first], ready.leaves[pair.second])) for pair in ready.pairs}
+    named = {frozenset((ready.leaves[one], ready.leaves[two])) for one, two in ready.pairs}
     assert frozenset(("beam.tilt_deg", "beam.ripple_fraction")) in named
     assert len(named) < len(ready.leaves) * (len(ready.leaves) - 1) / 2
 

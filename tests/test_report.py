@@ -18,6 +18,7 @@ from matplotlib.text import Text
 from reduce.combine import Information
 from reduce.handoff import bundle, information_from
 from reduce.joint_fit import JointFit, covariance_modes_k, family_from, joint_fit
+from reduce.removed import removed_from_signal
 from reduce.report.facts import (
     beyond_foreground_k,
     bin_labels,
@@ -34,7 +35,6 @@ from reduce.report.transfer_plot import measured_shapes, transfer_figure
 from reduce.report.trough_plot import trough_figure
 from reduce.report.turning_points_plot import CELLS, highest_density_level, smooth_density, turning_points_figure
 from reduce.runner import Products
-from reduce.subtract import removed_from_signal
 from reduce.trough_model import TroughModel, trough_model
 from reduce.turning_points import sample_posterior, summarise
 from sims.config import Config, FitConfig, NoSignal
@@ -143,7 +143,7 @@ def case() -> Case:
     products = observed(config, model, frequency, width)
     rng = np.random.default_rng(5)
     fit = joint_fit(products.dataset("spectra.nc"), config.foreground, model, rng)
-    products["bundle.nc"] = bundle(products.dataset("spectra.nc"), fit)
+    products["bundle.nc"] = bundle(fit)
     information: Information = information_from(products.dataset("bundle.nc"))
     posterior = sample_posterior(information, model, config.turning_points, rng, lambda steps: None)
     products["posterior.nc"] = posterior.samples
@@ -467,7 +467,7 @@ def test_one_bin_without_systematics_or_integration_can_be_reported(case: Case) 
     _, config = case.measured
     model = trough_model(config.turning_points, spectra["frequency_mhz"].values, spectra["width_mhz"].values)
     fit = joint_fit(spectra, config.foreground, model, np.random.default_rng(2))
-    products = Products({**case.products, "spectra.nc": spectra, "bundle.nc": bundle(spectra, fit)})
+    products = Products({**case.products, "spectra.nc": spectra, "bundle.nc": bundle(fit)})
     del products["truth.nc"]
     assert set(plots(products, config, model)) == NAMES
     page = summary(products, config)

@@ -14,7 +14,8 @@ from numpy.typing import NDArray
 from reduce.covariance import DiagonalLowRank
 from reduce.foreground.log_polynomial import LogPolynomial
 from reduce.foreground.power_series import PowerSeries
-from reduce.subtract import ConvergenceError, removed_from_signal, subtract
+from reduce.removed import removed_from_signal
+from reduce.subtract import ConvergenceError, subtract
 from sims.errors import InputError
 
 LOW_MHZ, HIGH_MHZ = 40.0, 120.0

@@ -11,7 +11,9 @@ import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
+from reduce.covariance import DiagonalLowRank
 from reduce.joint_fit import covariance_modes_k
+from reduce.removed import without_known
 from reduce.runner import Products
 from reduce.trough_model import NAMES, POINTS
 from sims.config import Config, FitConfig, FixedBoresight, NoSignal, ScheduledBoresight, TurningPointSignal
@@ -98,9 +100,6 @@ def no_signal_put_in(products: Products, config: FitConfig) -> bool:
 def beyond_foreground_k(packed: xr.Dataset, values_k: FloatArray) -> FloatArray:
     """What the foreground fit leaves of spectra put on top of it, to first order.
 
-    The modes of the covariance have no part along the foreground (`reduce.joint_fit`), so the
-    generalised fit of the foreground is the one weighted by the noise, bin by bin.
-
     Parameters
     ----------
     packed : xarray.Dataset
@@ -112,6 +111,23 @@ def beyond_foreground_k(packed: xr.Dataset, values_k: FloatArray) -> FloatArray:
     -------
     ndarray[bin, channel, ...]
         Residual, K; NaN where flagged.
+    """
+    left_k = _beyond_free_k(packed, values_k)
+    known = int(packed.attrs.get("foreground_known_modes", 0))
+    if not known:
+        return left_k
+    good = packed["flag"].values == 0
+    modes_k = covariance_modes_k(packed, packed["fiducial_signal_k"].values)
+    covariance = DiagonalLowRank.from_bins(packed["noise_variance"].values, _beyond_free_k(packed, modes_k), good)
+    left_k[good] = without_known(covariance, known, left_k[good])
+    return left_k
+
+
+def _beyond_free_k(packed: xr.Dataset, values_k: FloatArray) -> FloatArray:
+    """What the free terms leave.
+
+    The modes of the covariance have no part along them (`reduce.joint_fit`), so the generalised fit
+    of the free terms is the one weighted by the noise, bin by bin.
     """
     good = packed["flag"].values == 0
     sigma_k = np.sqrt(packed["noise_variance"].values)
@@ -132,9 +148,22 @@ def left_of_signal_k(packed: xr.Dataset, signal_k: FloatArray) -> FloatArray:
     return beyond_foreground_k(packed, packed["signal_response"].values * signal_k)
 
 
+def residual_seen_k(packed: xr.Dataset) -> FloatArray:
+    """Residual ndarray[bin, channel] to be drawn, K: less what the known foreground's modes imitate; NaN where flagged.
+
+    A foreground without modes of its own leaves the bundle's residual as it is.
+    """
+    residual_k = np.asarray(packed["residual_k"].values)
+    return beyond_foreground_k(packed, residual_k) if packed.attrs.get("foreground_known_modes", 0) else residual_k
+
+
 def systematic_sigma_k(packed: xr.Dataset) -> FloatArray | None:
-    """Standard deviation ndarray[bin, channel], K, that the modes leave after the fit; None without modes."""
+    """Standard deviation ndarray[bin, channel], K, that modes leave after the fit; None without modes.
+
+    A known foreground's own modes are not among them.
+    """
     modes_k = covariance_modes_k(packed, packed["fiducial_signal_k"].values)
+    modes_k = modes_k[..., : modes_k.shape[-1] - int(packed.attrs.get("foreground_known_modes", 0))]
     if not modes_k.shape[-1]:
         return None
     return np.asarray(np.sqrt((beyond_foreground_k(packed, modes_k) ** 2).sum(axis=-1)))

@@ -9,7 +9,14 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import FixedLocator, FuncFormatter, NullLocator
 from numpy.typing import NDArray
 
-from reduce.report.facts import bin_labels, bins_with_data, left_of_signal_k, systematic_sigma_k, true_signal_k
+from reduce.report.facts import (
+    bin_labels,
+    bins_with_data,
+    left_of_signal_k,
+    residual_seen_k,
+    systematic_sigma_k,
+    true_signal_k,
+)
 from reduce.report.style import (
     BLACK,
     BLUE,
@@ -47,6 +54,7 @@ def residuals_figure(products: Products, config: FitConfig) -> Figure:
         Of more than `MOST_PANELS` bins, that many, evenly spread; the title says so.
     """
     packed = products.dataset("bundle.nc")
+    packed = packed.assign(residual_k=(("bin", "channel"), residual_seen_k(packed)))
     names = bin_labels(products, config)[1]
     labels = [names[number] for number in bins_with_data(products)]
     count = len(labels)

@@ -121,7 +121,7 @@ def _fit(products: Products, config: FitConfig) -> list[str]:
     best = products["turning_points.json"]["best_trough"]
     sizes = products.dataset("bundle.nc").sizes
     modes, terms = sizes.get("mode", 0), sizes["term"]
-    names = attribute_list(products.dataset("spectra.nc"), "mode_names")
+    names = attribute_list(products.dataset("bundle.nc"), "mode_names")
     surviving = float(numbers["signal_surviving_fraction"])
     about = f" ({', '.join(str(name) for name in names)})" if names else ""
     corrected = []
@@ -132,15 +132,41 @@ def _fit(products: Products, config: FitConfig) -> list[str]:
             f"chromaticity of the beam divided out first: factors {factor.min():.4f} to {factor.max():.4f}, known to "
             f"{error.max():.1e}"
         ]
+    known = int(numbers.get("foreground_known_modes", 0))
     return [
         *corrected,
-        f"{config.foreground.family}, {terms} terms a bin without priors; condition number "
-        f"{float(numbers['foreground_condition_number']):.3g}",
-        f"covariance: noise and {modes} systematic modes{about}",
+        *_model(products, config, terms, known, float(numbers["foreground_condition_number"])),
+        f"covariance: noise and {modes - known} systematic modes{about}"
+        if modes > known or not known
+        else "covariance: noise and the modes of the foreground",
         _chi("foreground alone", numbers["foreground_chi_squared"], numbers["foreground_degrees_of_freedom"]),
         _chi("foreground, best trough", best["chi_squared"], best["degrees_of_freedom"]),
         _chi("foreground, any signal", numbers["chi_squared_min"], numbers["degrees_of_freedom"]),
         f"of the signal's signal-to-noise ratio {surviving:.2%} survives the subtraction",
+    ]
+
+
+def _model(products: Products, config: FitConfig, terms: int, known: int, condition: float) -> list[str]:
+    """What the foreground is modelled by."""
+    settings = config.foreground
+    if settings.family == "ensemble":
+        packed = products.dataset("ensemble.nc")
+        size = packed["size_of_noise"].values
+        safety = ""
+        if settings.safety_terms is not None:
+            safety = f"; beside it {settings.safety_terms} terms a bin of {settings.safety_sd:g} of the foreground each"
+        return [
+            f"ensemble of {packed.attrs['draws']} simulated campaigns, all bins jointly: {len(size)} modes, the "
+            f"largest {size[0]:.2g} times the noise, {int((size > 1.0).sum())} above it; variance times "
+            f"{float(packed.attrs['inflation']):.3f} for the finite number of draws{safety}",
+            f"drawn anew in each: {', '.join(str(path) for path in attribute_list(packed, 'drawn_paths'))}",
+        ]
+    free = f"{settings.family}, {terms} terms a bin without priors; condition number {condition:.3g}"
+    if settings.family != "gaussian-process":
+        return [free]
+    return [
+        free,
+        f"it may err by {settings.amplitude:g} of itself, correlated over {settings.length:g} in ln f: {known} modes",
     ]
 
 
@@ -209,7 +235,7 @@ def _left_out(products: Products, config: FitConfig) -> list[str]:
     if not config.surface.reflection:
         lines.append("the sky mirrored by the surface (surface.reflection is off)")
     fields = [name for name in ("index_field", "map_noise") if getattr(config.knowledge, name) is not None]
-    if fields:
+    if fields and config.foreground.family != "ensemble":
         lines.append(f"from the covariance, though a drawn truth has it: knowledge.{', knowledge.'.join(fields)}")
     roughness = "roughness of the surface" if config.surface.layer else "roughness and layers of the surface"
     lines.append(
