@@ -109,9 +109,13 @@ class DiagonalLowRank:
         return np.asarray(np.sqrt(self.noise_variance_k2))
 
     @cached_property
+    def _axes(self) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+        left, singular, right = np.linalg.svd(self.modes_k / self.sigma_k[:, None], full_matrices=False)
+        return left, singular, right
+
+    @property
     def _directions(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        left, singular, _ = np.linalg.svd(self.modes_k / self.sigma_k[:, None], full_matrices=False)
-        return left, singular
+        return self._axes[:2]
 
     def _filter(self, scaled: NDArray[np.float64], removed: NDArray[np.float64]) -> NDArray[np.float64]:
         left, _ = self._directions
@@ -156,6 +160,25 @@ class DiagonalLowRank:
         _, singular = self._directions
         scaled = self._filter(self._scaled(values_k), singular**2 / (1.0 + singular**2))
         return self._scaled(scaled)
+
+    def scores(self, values_k: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Mean of each mode's amplitude given the data, U^T C^-1 times vectors.
+
+        Parameters
+        ----------
+        values_k : ndarray[row, ...]
+            Vectors in kelvin along the first axis.
+
+        Returns
+        -------
+        ndarray[mode, ...]
+            In standard deviations, B S (1 + S^2)^-1 A^T D^-1/2 r: without the cancellation of `solve` beside
+            modes far above the noise.
+        """
+        left, singular, right = self._axes
+        flat = self._scaled(values_k).reshape(self.rows, -1)
+        found = right.T @ ((singular / (1.0 + singular**2))[:, None] * (left.T @ flat))
+        return np.asarray(found.reshape(found.shape[0], *np.shape(values_k)[1:]))
 
     @cached_property
     def log_det(self) -> float:

@@ -16,13 +16,13 @@ from numpy.typing import NDArray
 
 from reduce.combine import Information, combine, response_modes
 from reduce.covariance import DiagonalLowRank, factor_basis
-from reduce.fast_posterior import WeightedPosterior, carried_over, fast_posterior, prior_bank
 from reduce.foreground.galaxy_ionosphere import GalaxyIonosphere
 from reduce.foreground.gaussian_process import process_modes
 from reduce.foreground.known import KnownForeground, NoFamily, smooth_safety
 from reduce.foreground.log_polynomial import LogPolynomial
 from reduce.foreground.power_series import PowerSeries
 from reduce.foreground.protocol import Family
+from reduce.quick_posterior import CompressedBank, QuickPosterior, compressed_bank, quick_posterior
 from reduce.removed import RemovedSignal, removed_from_signal
 from reduce.subtract import Subtraction, subtract
 from reduce.trough_model import TroughModel
@@ -47,8 +47,8 @@ class JointFit:
     information : Information
     removed : RemovedSignal
         What the foreground fit leaves of the fiducial signal.
-    posterior : WeightedPosterior
-        Of the turning points, annealed.
+    posterior : QuickPosterior
+        Of the turning points.
     fiducial_signal_k : ndarray[channel]
         Signal at which the response's uncertainty was taken, K.
     bins : ndarray[bin]
@@ -66,7 +66,7 @@ class JointFit:
     subtraction: Subtraction
     information: Information
     removed: RemovedSignal
-    posterior: WeightedPosterior
+    posterior: QuickPosterior
     fiducial_signal_k: FloatArray
     bins: NDArray[np.int64]
     rounds: int
@@ -98,6 +98,7 @@ def joint_fit(
     model: TroughModel,
     rng: np.random.Generator,
     ensemble: KnownForeground | None = None,
+    bank: CompressedBank | None = None,
 ) -> JointFit:
     """Subtract the foreground from all bins and put what is left into the information form.
 
@@ -112,6 +113,8 @@ def joint_fit(
     ensemble : KnownForeground, optional
         Of all bins of `spectra`; needed where `settings` asks for one. What the spectra's own modes
         say of the numbers that were drawn for it must not be among them still.
+    bank : CompressedBank, optional
+        Draws from the prior of `model`, to be made once for many fits.
 
     Returns
     -------
@@ -129,8 +132,8 @@ def joint_fit(
     chosen = spectra.isel(bin=bins)
     frequency = chosen["frequency_mhz"].values
     family = family_from(settings, frequency)
-    bank = prior_bank(model, rng)
-    fiducial_k = bank.signal_k.mean(axis=0)
+    bank = compressed_bank(model, rng) if bank is None else bank
+    fiducial_k = bank.coordinates.mean(axis=0) @ bank.directions
     data = {
         "frequency_mhz": frequency,
         "noise_variance_k2": chosen["noise_variance"].values,
@@ -149,7 +152,6 @@ def joint_fit(
         )
     chosen = chosen if known is None else with_known_modes(chosen, known)
     rounds = 0
-    last: tuple[Information, WeightedPosterior] | None = None
     while True:
         rounds += 1
         modes_k = beyond_foreground_k(covariance_modes_k(chosen, fiducial_k), first)
@@ -162,9 +164,7 @@ def joint_fit(
             good=good[bins],
             draws=None if known is None else known.draws,
         )
-        carried = None if last is None else carried_over(last[1], last[0], information, model, rng)
-        posterior = carried or fast_posterior(information, model, bank, rng)
-        last = (information, posterior)
+        posterior = quick_posterior(information, model, bank, rng)
         found_k = posterior.weight @ model.signal_k(posterior.parameters)
         at_rest = "response_modes" not in chosen or bool(np.abs(found_k - fiducial_k).max() < AT_REST_K)
         if at_rest or rounds == MOST_ROUNDS:

@@ -8,6 +8,7 @@ the truth, and the plots that draw it beside the result, is ever given it.
 from __future__ import annotations
 
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import xarray as xr
@@ -27,18 +28,21 @@ from reduce.ensemble import (
 from reduce.handoff import bundle, combined_spectrum_text, information_from
 from reduce.joint_fit import joint_fit
 from reduce.knowledge_modes import engine_runs, knowledge_modes
+from reduce.limits import limits_of
+from reduce.limits_text import limits_text
 from reduce.redraw import redrawer
 from reduce.report.plots import plots
 from reduce.report.summary import summary
 from reduce.runner import Made, Outcome, Products, Progress, Stage, Tools, run_stages
 from reduce.spectra import read_spectra
 from reduce.trough_model import TroughModel, trough_model
-from reduce.turning_points import ENSEMBLES, sample_posterior, summarise
+from reduce.turning_points import ENSEMBLES, Posterior, sample_posterior, summarise
 from sims.campaign import engine_passes, observe
 from sims.config import FORWARD_SECTIONS, Config, FitConfig
 from sims.config_load import load_config, load_fit_config
 from sims.errors import InputError
 from sims.products import sha256_of
+from sims.radio_background import RadioBackground
 from sims.schema import SPECTRA, TRUTH, describe
 from sims.streams import stream
 from sims.vantage import survey_geometry
@@ -121,8 +125,20 @@ def find_turning_points(products: Products, config: FitConfig, tools: Tools) -> 
             information, model, config.turning_points, stream(config.run.seed, "posterior"), advance
         )
     sky = packed.attrs.get("sky", "measured")
-    found = {"campaign": config.run.name, "sky": sky, **summarise(posterior, model, information)}
+    found = {
+        "campaign": config.run.name,
+        "sky": sky,
+        **summarise(posterior, model, information),
+        "gas": limits_on_gas(posterior, config),
+    }
     return {"posterior.nc": posterior.samples.assign_attrs(sky=sky), "turning_points.json": found}
+
+
+def limits_on_gas(posterior: Posterior, config: FitConfig) -> dict[str, Any]:
+    """What the posterior's draws say of the gas, under the configured radio background."""
+    draws = posterior.stacked()
+    background = RadioBackground(excess_k=config.limits.radio_excess_k, index=config.limits.radio_index)
+    return limits_of(draws[:, :3], draws[:, 3:], background)
 
 
 def write_spectrum(products: Products, config: FitConfig, tools: Tools) -> Made:
@@ -133,8 +149,14 @@ def write_spectrum(products: Products, config: FitConfig, tools: Tools) -> Made:
 def report(products: Products, config: FitConfig, tools: Tools) -> Made:
     """Everything -> plots and the summary."""
     pictures = plots(products, config, _model(products.dataset("bundle.nc"), config))
-    return {**pictures, "summary.txt": summary(products, config)}
+    return {
+        **pictures,
+        "gas.txt": limits_text(products["turning_points.json"]["gas"]),
+        "summary.txt": summary(products, config),
+    }
 
+
+PICTURES = ("spectra.png", "residuals.png", "trough.png", "turning_points.png", "transfer.png")
 
 _OBSERVE = Stage(
     name="observe",
@@ -155,7 +177,7 @@ _ENSEMBLE = Stage(
 _TURNING_POINTS = Stage(
     name="turning-points",
     title="find the turning points",
-    sections=("run", "turning_points"),
+    sections=("run", "turning_points", "limits"),
     needs=("bundle.nc",),
     makes=("posterior.nc", "turning_points.json"),
     work=find_turning_points,
@@ -187,7 +209,7 @@ def _report(more: tuple[str, ...]) -> Stage:
         title="draw and sum up",
         sections=("run", "foreground", "turning_points"),
         needs=("spectra.nc", *more, "bundle.nc", "posterior.nc", "turning_points.json"),
-        makes=("spectra.png", "residuals.png", "trough.png", "turning_points.png", "transfer.png", "summary.txt"),
+        makes=(*PICTURES, "gas.txt", "summary.txt"),
         work=report,
     )
 

@@ -125,4 +125,4 @@ def without_known(covariance: DiagonalLowRank, known_modes: int, left_k: NDArray
     if not known_modes:
         return left_k
     modes = covariance.modes_k[:, -known_modes:]
-    return np.asarray(left_k - modes @ (modes.T @ covariance.solve(left_k)))
+    return np.asarray(left_k - np.tensordot(modes, covariance.scores(left_k)[-known_modes:], axes=(1, 0)))

@@ -24,7 +24,7 @@ from sims.config_forward import (
     TableSignal,
     TurningPointSignal,
 )
-from sims.config_reduction import Foreground, PointPrior, TurningPoints
+from sims.config_reduction import Foreground, Limits, PointPrior, TurningPoints
 from sims.config_sky import HealpixSky, ImageSky, InventedSky, Sky
 from sims.config_vantage import (
     Boresight,
@@ -64,6 +64,7 @@ __all__ = [
     "ImageSky",
     "InventedSky",
     "Layer",
+    "Limits",
     "LunarOrbit",
     "LunarOrbitFile",
     "LunarSurface",
@@ -127,6 +128,7 @@ class FitConfig(Section):
     run: Run
     foreground: Foreground
     turning_points: TurningPoints
+    limits: Limits = Limits()
 
 
 class Config(FitConfig):

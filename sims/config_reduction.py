@@ -11,7 +11,7 @@ from typing import Literal, Self
 from pydantic import Field, model_validator
 
 from sims.config_forward import Point
-from sims.quantities import MhzRange, MillikelvinRange, Section
+from sims.quantities import Kelvin, MhzRange, MillikelvinRange, Section
 
 FamilyName = Literal["log-polynomial", "power-series", "galaxy-ionosphere", "gaussian-process", "ensemble"]
 DEFAULT_INDEX = 2.5
@@ -118,4 +118,20 @@ class TurningPoints(Section):
             problems.append(f"walkers must be a multiple of 4 (two ensembles of an even number), got {self.walkers}")
         if problems:
             raise ValueError("; ".join(problems))
+        return self
+
+
+class Limits(Section):
+    """``[limits]``: what the limits on the gas assume: a radio background beyond the cosmic microwave one, if any.
+
+    ``radio_excess`` is its brightness today at 78 MHz, a power law in frequency of ``radio_index``.
+    """
+
+    radio_excess_k: Kelvin = Field(default=0.0, ge=0, le=1000.0)
+    radio_index: float = Field(default=-2.6, ge=-4.0, le=0.0)
+
+    @model_validator(mode="after")
+    def _used(self) -> Self:
+        if self.radio_excess_k == 0.0 and "radio_index" in self.model_fields_set:
+            raise ValueError("radio_index does nothing without radio_excess")
         return self

@@ -42,6 +42,7 @@ def summary(products: Products, config: FitConfig) -> str:
         ("Observed", _observed(products, config)),
         ("Foreground and fit", _fit(products, config)),
         ("Turning points: median and 68 % interval", _points(products, config)),
+        ("What C says of the gas, without a model of its sources (gas.txt says more)", _gas(products)),
         ("Is it there, and is it sampled well", _trust(products)),
         ("Flags", _flags(products)),
         ("Left out", _left_out(products, config)),
@@ -202,6 +203,33 @@ def _other_truth(products: Products, config: FitConfig, signal_k: np.ndarray) ->
     deepest = int(np.argmin(signal_k))
     frequency = float(products.dataset("truth.nc")["frequency_mhz"][deepest])
     return f"truth: another shape, deepest {1e3 * signal_k[deepest]:.1f} mK at {frequency:.2f} MHz"
+
+
+def _gas(products: Products) -> list[str]:
+    """The headlines of gas.txt."""
+    gas = products["turning_points.json"]["gas"]
+    at_c = gas["points"]["C"]
+    lines = [
+        f"redshift {_marginal(at_c['redshift'], '.2f')}, spin temperature {_marginal(at_c['spin_temperature_k'])} K",
+        f"gas no hotter than {_bound(at_c['kinetic_temperature_max_k'], 'upper_95')} K (95 %), heat left below "
+        f"{_bound(at_c['heat_max_ev_per_baryon'], 'upper_95')} eV a baryon",
+        "coupling saturated, heat cancels at least "
+        f"{_bound(at_c['heating_share_of_adiabatic'], 'lower_95')} of the adiabatic cooling (95 %)",
+    ]
+    return lines if gas["background"]["excess_k"] == 0.0 else [gas["background"]["text"], *lines]
+
+
+def _marginal(spread: dict[str, Any], form: str = ".3g") -> str:
+    if not spread["defined"]:
+        return "undefined"
+    low, high = ("without bound" if end is None else format(end, form) for end in spread["interval_68"])
+    middle = "without bound" if spread["median"] is None else format(spread["median"], form)
+    return f"{middle} ({low} to {high})"
+
+
+def _bound(spread: dict[str, Any], side: str) -> str:
+    value = spread.get(side) if spread["defined"] else None
+    return "anything" if value is None else f"{value:.3g}"
 
 
 def _trust(products: Products) -> list[str]:
