@@ -10,8 +10,9 @@ truth of a mock has streams of its own and is in no ensemble.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
+from itertools import islice
 
 import numpy as np
 import xarray as xr
@@ -26,6 +27,7 @@ from sims.errors import InputError, raise_if_any
 from sims.frequency import channel_grid
 from sims.receiver import gain, received_k
 from sims.schema import ENSEMBLE, describe
+from sims.sky_average import Sky
 
 FloatArray = NDArray[np.float64]
 
@@ -74,7 +76,9 @@ class Spread:
     inflation: float
 
 
-def drawn_spectra(ready: Redrawer, name: str, numbers: Iterable[int], advance: Callable[[int], None]) -> DrawnSpectra:
+def drawn_spectra(
+    ready: Redrawer, name: str, numbers: Sequence[int], advance: Callable[[int], None], world: Config | None = None
+) -> DrawnSpectra:
     """Spectra of the draws of a stream.
 
     Parameters
@@ -82,10 +86,12 @@ def drawn_spectra(ready: Redrawer, name: str, numbers: Iterable[int], advance: C
     ready : Redrawer
     name : str
         Name of the stream.
-    numbers : iterable of int
+    numbers : sequence of int
         Which draws of it; each can be made again alone.
     advance : callable
         Told the number of draws done since it was last told.
+    world : Config, optional
+        Whose ``[knowledge]`` is drawn from; by default that of `ready`. It differs from it in that alone.
 
     Returns
     -------
@@ -96,19 +102,31 @@ def drawn_spectra(ready: Redrawer, name: str, numbers: Iterable[int], advance: C
     InputError
         If a draw is not allowed.
     """
-    wanted = list(numbers)
+    config = ready.config if world is None else world
+
+    def campaigns() -> Iterator[tuple[Config, Sky]]:
+        for number in numbers:
+            drawn = draw(config, name, number)
+            yield drawn.config, drawn_sky(config, drawn, ready.sky, name)
+
+    return redrawn(ready, campaigns(), len(numbers), advance)
+
+
+def redrawn(
+    ready: Redrawer, campaigns: Iterator[tuple[Config, Sky]], count: int, advance: Callable[[int], None]
+) -> DrawnSpectra:
+    """Spectra, as the receiver reports them, of `count` changed campaigns, taken a few at a time."""
     grid = channel_grid(ready.config.channels)
-    shape = (len(wanted), ready.config.bins.count, grid.count)
+    shape = (count, ready.config.bins.count, grid.count)
     temperature_k, response = np.empty(shape), np.empty(shape)
-    for start in range(0, len(wanted), AT_ONCE):
-        draws = [draw(ready.config, name, number) for number in wanted[start : start + AT_ONCE]]
-        changed: list[Config] = [each.config for each in draws]
-        skies = [drawn_sky(ready.config, each, ready.sky, name) for each in draws]
-        antenna_k, reaching = ready.spectra(list(zip(changed, skies, strict=True)))
-        for row, config in enumerate(changed):
-            temperature_k[start + row] = received_k(antenna_k[row], grid.centre_mhz, config.receiver)
-            response[start + row] = reaching[row] * gain(grid.centre_mhz, config.receiver)
-        advance(len(draws))
+    row = 0
+    while changed := list(islice(campaigns, AT_ONCE)):
+        antenna_k, reaching = ready.spectra(changed)
+        for number, (config, _) in enumerate(changed):
+            temperature_k[row] = received_k(antenna_k[number], grid.centre_mhz, config.receiver)
+            response[row] = reaching[number] * gain(grid.centre_mhz, config.receiver)
+            row += 1
+        advance(len(changed))
     return DrawnSpectra(temperature_k, response)
 
 

@@ -42,7 +42,7 @@ from sims.config import FORWARD_SECTIONS, Config, FitConfig
 from sims.config_load import load_config, load_fit_config
 from sims.errors import InputError
 from sims.products import sha256_of
-from sims.radio_background import RadioBackground
+from sims.radio_background import CMB_ALONE, RadioBackground
 from sims.schema import SPECTRA, TRUTH, describe
 from sims.streams import stream
 from sims.vantage import survey_geometry
@@ -137,7 +137,10 @@ def find_turning_points(products: Products, config: FitConfig, tools: Tools) -> 
 def limits_on_gas(posterior: Posterior, config: FitConfig) -> dict[str, Any]:
     """What the posterior's draws say of the gas, under the configured radio background."""
     draws = posterior.stacked()
-    background = RadioBackground(excess_k=config.limits.radio_excess_k, index=config.limits.radio_index)
+    excess_k, index = config.limits.radio_excess_k, config.limits.radio_index
+    background = CMB_ALONE
+    if excess_k is not None and index is not None:
+        background = RadioBackground(excess_k=excess_k, index=index)
     return limits_of(draws[:, :3], draws[:, 3:], background)
 
 

@@ -127,11 +127,11 @@ class Limits(Section):
     ``radio_excess`` is its brightness today at 78 MHz, a power law in frequency of ``radio_index``.
     """
 
-    radio_excess_k: Kelvin = Field(default=0.0, ge=0, le=1000.0)
-    radio_index: float = Field(default=-2.6, ge=-4.0, le=0.0)
+    radio_excess_k: Kelvin | None = Field(default=None, gt=0, le=1000.0)
+    radio_index: float | None = Field(default=None, ge=-4.0, le=0.0)
 
     @model_validator(mode="after")
-    def _used(self) -> Self:
-        if self.radio_excess_k == 0.0 and "radio_index" in self.model_fields_set:
-            raise ValueError("radio_index does nothing without radio_excess")
+    def _together(self) -> Self:
+        if (self.radio_excess_k is None) != (self.radio_index is None):
+            raise ValueError("radio_excess and radio_index go together")
         return self

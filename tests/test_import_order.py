@@ -119,6 +119,7 @@ ORDER = (
     "reduce.ensemble",
     "reduce.calibration",
     "reduce.mocks",
+    "reduce.trust",
     "reduce.timeline",
     "reduce.sky_card",
     "reduce.beam_card",
