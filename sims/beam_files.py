@@ -6,8 +6,7 @@ form or file, into what the engine integrates.
 
 from __future__ import annotations
 
-from dataclasses import replace
-from functools import lru_cache
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
@@ -25,7 +24,9 @@ from sims.errors import InputError, raise_if_any
 from sims.far_field import FarField
 
 NORMALISED = 0.02  # how far the mean over the sphere of a directivity may lie from 1, and a gain's above it
-_KEPT_TABLES = 16
+KEPT_BYTES = 2**30
+"""Of tables that are kept in memory: every redraw of a beam with modes asks for all of them again. A table of 1 degree
+and 100 frequencies is 52 MB, with complex fields 260 MB. The last one read is kept whatever its size."""
 
 
 def antenna_from(settings: BeamSettings) -> Beam | GridBeam:
@@ -51,7 +52,7 @@ def antenna_from(settings: BeamSettings) -> Beam | GridBeam:
 
 
 def read_far_field(source: Source) -> FarField:
-    """Read a pattern; kept in memory until its files change.
+    """Read a pattern; kept in memory until its files change, or `KEPT_BYTES` are needed for others.
 
     Parameters
     ----------
@@ -68,7 +69,7 @@ def read_far_field(source: Source) -> FarField:
         With every fault of the files, each with its place.
     """
     files = (source.file,) if isinstance(source, NetcdfSource) else source.files
-    return _read(source, tuple(_stamp(path) for path in files))
+    return _KEPT.table(source, tuple(_stamp(path) for path in files))
 
 
 def _stamp(path: Path) -> tuple[int, int]:
@@ -80,9 +81,31 @@ def _stamp(path: Path) -> tuple[int, int]:
     return found.st_mtime_ns, found.st_size
 
 
-@lru_cache(maxsize=_KEPT_TABLES)
-def _read(source: Source, stamps: tuple[tuple[int, int], ...]) -> FarField:
-    """Every move of a beam by its error asks for the same tables: `stamps` says whether they are still those."""
+@dataclass(eq=False)
+class _Kept:
+    """Tables read, the last used last. Stamps say whether the files are still those."""
+
+    limit_bytes: int
+    tables: dict[Source, tuple[tuple[tuple[int, int], ...], FarField]] = field(default_factory=dict)
+
+    def table(self, source: Source, stamps: tuple[tuple[int, int], ...]) -> FarField:
+        kept = self.tables.pop(source, None)
+        if kept is None or kept[0] != stamps:
+            kept = stamps, _read(source)
+        self.tables[source] = kept
+        while len(self.tables) > 1 and sum(_bytes(table) for _, table in self.tables.values()) > self.limit_bytes:
+            self.tables.pop(next(iter(self.tables)))
+        return kept[1]
+
+
+_KEPT = _Kept(KEPT_BYTES)
+
+
+def _bytes(table: FarField) -> int:
+    return sum(array.nbytes for array in (table.power, table.e_theta, table.e_phi) if array is not None)
+
+
+def _read(source: Source) -> FarField:
     if isinstance(source, NecSource):
         return read_nec_files(source)
     if isinstance(source, TableSource):

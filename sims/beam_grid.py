@@ -47,33 +47,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sims.beam import Ripple
+from sims.beam_error import AngularError, AngularTable, joining_error, refuse_large
 from sims.beam_smooth import FrequencySpline, frequency_spline
-from sims.beam_spline import AngularSpline, angular_spline, evaluate_grid, value_matrices
+from sims.beam_spline import AngularSpline, angular_spline, evaluate_grid
 from sims.errors import raise_if_any
 from sims.far_field import FarField
 
 FloatArray = NDArray[np.float64]
 BATCH_FREQUENCIES = 32
-RICHARDSON = 16.0
-"""A fourth-order error falls by this when the step is halved."""
-SAFETY = 1.25
-"""Usual where the order was checked on three grids (grid convergence index; Roache 1997, Annu. Rev. Fluid Mech. 29)."""
-
-
-@dataclass(frozen=True, eq=False)
-class AngularError:
-    """Estimated error of joining the directions, a value a frequency.
-
-    Attributes
-    ----------
-    rms : ndarray[frequency]
-        Root mean square over the sphere (or the upper half), over that of the pattern.
-    largest : ndarray[frequency]
-        Largest anywhere, over the peak.
-    """
-
-    rms: FloatArray
-    largest: FloatArray
 
 
 @dataclass(frozen=True, eq=False)
@@ -121,7 +102,7 @@ class GridBeam:
         return self.sphere.layout
 
     def node_table(self, frequency_mhz: FloatArray) -> FloatArray:
-        """Spline coefficients of the directivity for the kernel.
+        """Spline coefficients of the directivity for the kernel, and so for every antenna temperature.
 
         Parameters
         ----------
@@ -136,11 +117,22 @@ class GridBeam:
         Raises
         ------
         InputError
-            If a frequency lies outside the tabulated band.
+            If a frequency lies outside the tabulated band, or the directions are joined with too large an error there
+            (`sims.beam_error.LARGEST_ERROR`).
         """
-        pattern = self._pattern(frequency_mhz)
-        pattern /= self.sphere.mean(pattern)[:, None, None]
-        return self.sphere.coefficients(pattern)
+        self._refuse_large_errors(frequency_mhz)
+        return self._coefficients(frequency_mhz)
+
+    def _coefficients(self, frequency_mhz: FloatArray) -> FloatArray:
+        return self.sphere.coefficients(self._directive(frequency_mhz))
+
+    def _refuse_large_errors(self, frequency_mhz: FloatArray) -> None:
+        rms = [
+            self.error_estimate(frequency_mhz[start : start + BATCH_FREQUENCIES]).rms
+            for start in range(0, len(frequency_mhz), BATCH_FREQUENCIES)
+        ]
+        directions = f"{len(self.table.theta_deg)} thetas and {len(self.table.phi_deg)} phis"
+        refuse_large(np.concatenate([[], *rms]), frequency_mhz, directions, self.table.source)
 
     def directivity(self, frequency_mhz: FloatArray, direction: FloatArray) -> FloatArray:
         """Directivity D, whose integral over the sphere is 4 pi (Kraus, Radio Astronomy).
@@ -166,7 +158,7 @@ class GridBeam:
         for start in range(0, len(frequency_mhz), BATCH_FREQUENCIES):
             some = slice(start, start + BATCH_FREQUENCIES)
             part = np.empty((len(direction), len(frequency_mhz[some])))
-            evaluate_grid(self.node_table(frequency_mhz[some]), self.layout, towards, part)
+            evaluate_grid(self._coefficients(frequency_mhz[some]), self.layout, towards, part)
             values[:, some] = part
         return values
 
@@ -201,24 +193,19 @@ class GridBeam:
         Returns
         -------
         AngularError
-            What a table of twice the step misses at the directions left out, over 15 (Richardson: the full
-            table's error is a sixteenth), or over less where leaving out three of four shows that the order is not yet
-            reached, times `SAFETY`. The root mean square is taken midway between directions, where a cubic spline errs
-            most, so it errs on the safe side by up to 1.6 more. Added is what the spline misses at the table's own
-            directions, zero for equal steps. Infinite where the table is too small to be thinned.
+            See `sims.beam_error.joining_error`.
         """
+        return joining_error(
+            AngularTable(
+                self.table.theta_deg, self.table.phi_deg, self._directive(frequency_mhz), self.sphere,
+                self.table.upper_half,
+            )
+        )  # fmt: skip
+
+    def _directive(self, frequency_mhz: FloatArray) -> FloatArray:
         pattern = self._pattern(frequency_mhz)
         pattern /= self.sphere.mean(pattern)[:, None, None]
-        halved = self._missed(pattern, 2)
-        quartered = self._missed(pattern, 4)
-        power = np.sqrt((pattern**2 @ self.sphere.phi_weight) @ self.sphere.theta_weight)
-        if self.table.upper_half:
-            power *= np.sqrt(2.0)
-        peak = pattern.max(axis=(1, 2))
-        at_nodes = np.abs(self._at_own_directions(pattern) - pattern)
-        rms = _richardson(halved.rms, quartered.rms) + self._rms(at_nodes)
-        largest = _richardson(halved.largest, quartered.largest) + at_nodes.max(axis=(1, 2))
-        return AngularError(rms / power, largest / peak)
+        return pattern
 
     def _pattern(self, frequency_mhz: FloatArray) -> FloatArray:
         matrix = self.spline.matrix(frequency_mhz) / self.mean_power
@@ -227,37 +214,6 @@ class GridBeam:
         if self.ripple is not None:
             pattern *= self.ripple.factor(frequency_mhz, np.cos(np.radians(self.table.theta_deg))).T[:, :, None]
         return pattern
-
-    def _rms(self, difference: FloatArray, rows: slice = slice(None), columns: slice = slice(None)) -> FloatArray:
-        """Root mean square over some directions of the table, by solid angle."""
-        weight = np.sin(np.radians(self.table.theta_deg[rows]))
-        squares = (difference[:, rows, columns] ** 2).mean(axis=2) @ weight
-        return np.asarray(np.sqrt(squares / weight.sum()))
-
-    def _missed(self, pattern: FloatArray, every: int) -> AngularError:
-        """What a thinner table misses at the directions left out, not yet relative; infinite if it is too thin."""
-        theta, phi = self.table.theta_deg, self.table.phi_deg
-        first = (len(theta) - 1) % every if self.table.upper_half else 0
-        kept = pattern[:, first::every, ::every]
-        few = np.full(len(pattern), np.inf)
-        if kept.shape[1] < 4 or kept.shape[2] < 4:
-            return AngularError(few, few)
-        straight, across, near, far = value_matrices(
-            theta[first::every], phi[::every], self.table.upper_half, theta, phi
-        )
-        thin = np.matmul(straight, kept @ near.T) + np.matmul(across, kept @ far.T)
-        missed = np.abs(thin - pattern)
-        half = every // 2
-        between = self._rms(missed, slice((first + half) % every, None, every), slice(half, None, every))
-        return AngularError(between, missed.max(axis=(1, 2)))
-
-    def _at_own_directions(self, pattern: FloatArray) -> FloatArray:
-        theta, phi = np.meshgrid(np.radians(self.table.theta_deg), np.radians(self.table.phi_deg), indexing="ij")
-        z = np.maximum(np.cos(theta), 0.0) if self.table.upper_half else np.cos(theta)
-        direction = np.stack([np.sin(theta) * np.cos(phi), np.sin(theta) * np.sin(phi), z], axis=-1).reshape(-1, 3)
-        values = np.empty((len(direction), len(pattern)))
-        evaluate_grid(self.sphere.coefficients(pattern), self.layout, direction, values)
-        return np.moveaxis(values.reshape(*theta.shape, -1), -1, 0)
 
 
 def grid_beam(
@@ -306,10 +262,3 @@ def grid_beam(
     ])  # fmt: skip
     spline = frequency_spline(table.frequency_mhz, smoothing_mhz)
     return GridBeam(table, sphere, spline, mean, mounting, efficiency, structure_temperature_k, missing_power, ripple)
-
-
-def _richardson(halved: FloatArray, quartered: FloatArray) -> FloatArray:
-    """Error of the full table from those of two thinner ones."""
-    with np.errstate(divide="ignore", invalid="ignore"):
-        ratio = np.where(halved > 0.0, quartered / halved, RICHARDSON)
-    return np.asarray(SAFETY * halved / (np.clip(np.where(np.isfinite(ratio), ratio, 2.0), 2.0, RICHARDSON) - 1.0))

@@ -76,22 +76,17 @@ def read_healpix_files(source: HealpixSource) -> FarField:
 
 def _columns(path: Path, source: HealpixSource, problems: list[str]) -> list[FloatArray]:
     """The maps of a file in ring order, linear, not a number where there is none."""
-    try:
-        with fits.open(path) as opened:
-            table = next(unit for unit in opened if isinstance(unit, fits.BinTableHDU))
-            header, columns = table.header, [np.asarray(table.data.field(n)).ravel() for n in range(len(table.columns))]
-    except (OSError, StopIteration, TypeError, ValueError) as error:  # astropy's of a file cut short is a TypeError
-        problems.append(f"{path}: cannot be read as FITS with a binary table ({error or 'none found'})")
+    opened = _opened(path, problems)
+    if opened is None:
         return []
+    header, columns = opened
     ordering: str = source.ordering
     if ordering == "header":
-        ordering = {"RING": "ring", "NESTED": "nested"}.get(str(header.get("ORDERING", "")).upper(), "header")
+        ordering = {"RING": "ring", "NESTED": "nested"}.get(str(header["ORDERING"]).upper(), "header")
         if ordering == "header":
-            problems.append(
-                f"{path}: header ORDERING is {header.get('ORDERING')!r}; declare ordering as ring or nested"
-            )
+            problems.append(f"{path}: header ORDERING is {header['ORDERING']!r}; declare ordering as ring or nested")
             return []
-    if str(header.get("INDXSCHM", "")).upper() == "EXPLICIT":
+    if str(header["INDXSCHM"]).upper() == "EXPLICIT":
         problems.append(f"{path}: header INDXSCHM is 'EXPLICIT', pixels by number; maps of all pixels are needed")
         return []
     found = []
@@ -107,11 +102,25 @@ def _columns(path: Path, source: HealpixSource, problems: list[str]) -> list[Flo
             nside = hp.npix2nside(len(data))
             problems.append(f"{path}: column {number + 1}: nside {nside} cannot be nested; a power of 2 is needed")
             continue
-        data[hp.mask_bad(data)] = np.nan  # also as single precision rounds it
+        with np.errstate(invalid="ignore"):  # infinite ones are counted as not finite
+            data[hp.mask_bad(data)] = np.nan  # also as single precision rounds it
         if ordering == "nested":
             data = hp.reorder(data, n2r=True)
         found.append(_linear(data) if source.unit == "dBi" else data)
     return found
+
+
+def _opened(path: Path, problems: list[str]) -> tuple[dict[str, object], list[NDArray[np.generic]]] | None:
+    """What the header of a file says of the order of its pixels, and its columns."""
+    try:
+        with fits.open(path) as opened:
+            table = next(unit for unit in opened if isinstance(unit, fits.BinTableHDU))
+            columns = [np.asarray(table.data.field(n)).ravel() for n in range(len(table.columns))]
+            return {name: table.header.get(name) for name in ("ORDERING", "INDXSCHM")}, columns
+    except (OSError, StopIteration, LookupError, TypeError, ValueError, fits.VerifyError) as error:
+        # astropy's of a file cut short or damaged are of all these kinds
+        problems.append(f"{path}: cannot be read as FITS with a binary table ({error or 'none found'})")
+        return None
 
 
 def _linear(decibels: FloatArray) -> FloatArray:

@@ -84,7 +84,8 @@ def _scaled(pattern: NecPattern, problems: list[str], notes: list[str]) -> _Cell
     e_theta = rows[:, _E_THETA] * np.exp(1j * np.radians(rows[:, _E_THETA + 1]))
     e_phi = rows[:, _E_PHI] * np.exp(1j * np.radians(rows[:, _E_PHI + 1]))
     range_m = 1.0 if pattern.range_m is None else pattern.range_m
-    squared = range_m**2 * (rows[:, _E_THETA] ** 2 + rows[:, _E_PHI] ** 2)
+    with np.errstate(over="ignore"):
+        squared = range_m**2 * (rows[:, _E_THETA] ** 2 + rows[:, _E_PHI] ** 2)
     scale = 1.0
     if squared.max() > 0.0:
         problems += _negative_problems(pattern, rows)

@@ -40,12 +40,17 @@ def read_netcdf_file(source: NetcdfSource) -> FarField:
         sound. All problems together.
     """
     try:
-        with xr.open_dataset(source.file, engine="h5netcdf") as dataset:
-            return _far_field(dataset, source)
-    except (OSError, ValueError) as error:
-        if isinstance(error, InputError):
-            raise
+        opened = xr.open_dataset(source.file, engine="h5netcdf")
+    except (OSError, ValueError, LookupError, TypeError, AttributeError, RuntimeError) as error:
+        # h5py's of a file that is damaged are of all these kinds
         raise InputError(f"{source.file}: cannot be read as NetCDF-4 ({error})") from None
+    with opened as dataset:
+        try:
+            return _far_field(dataset, source)
+        except (OSError, ValueError) as error:
+            if isinstance(error, InputError):
+                raise
+            raise InputError(f"{source.file}: cannot be read as NetCDF-4 ({error})") from None
 
 
 def _far_field(dataset: xr.Dataset, source: NetcdfSource) -> FarField:
@@ -67,7 +72,8 @@ def _far_field(dataset: xr.Dataset, source: NetcdfSource) -> FarField:
         fields = (arrays[0] + 1j * arrays[1], arrays[2] + 1j * arrays[3])
         power = np.abs(fields[0]) ** 2 + np.abs(fields[1]) ** 2
     else:
-        power = 10.0 ** (arrays[0] / 10.0) if source.unit == "dBi" else arrays[0]
+        with np.errstate(over="ignore"):  # becomes a cell that is not finite, and is named as such
+            power = 10.0 ** (arrays[0] / 10.0) if source.unit == "dBi" else arrays[0]
     return far_field(
         axes["frequency"], axes["theta"], axes["phi"], power, str(source.file), fields=fields
     )  # fmt: skip

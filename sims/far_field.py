@@ -21,6 +21,8 @@ ComplexArray = NDArray[np.complex128]
 ANGLE_TOLERANCE_DEG = 1e-4  # as solvers print angles
 TRIFLE = 1e-3  # of a step: what rounded radians miss a pole, or the end of the turn, by
 AGREEMENT = 1e-3  # of the largest power: what is given twice must agree to this
+NOTHING = 1e-9  # of the largest power: what goes below the horizon up to this is none; solvers print -100 dBi for zero
+STEEP = 0.4  # of the power beside it: what the horizon may fall short of what the rows above it lead to
 _MOST_CELLS_NAMED = 5
 
 
@@ -80,7 +82,7 @@ def far_field(
         MHz; in any order.
     theta_deg, phi_deg : ndarray[theta], ndarray[phi]
         Axes of the grid, deg; in any order. Phi may run from -180, and may hold both ends of
-        the turn; a table whose thetas end at 90 is an upper half.
+        the turn; a table whose thetas end at 90, or that holds nothing below, is an upper half.
     power : ndarray[frequency, theta, phi]
         Linear; of any scale that the caller means.
     source : str
@@ -99,7 +101,8 @@ def far_field(
     InputError
         If a cell is not finite or negative, a frequency or angle is given twice, what is
         given twice (the ends of the turn, the poles) disagrees, the grid is too coarse or leaves
-        a gap, or a frequency has no power. All problems together, each with its cell.
+        a gap, a frequency has no power, or nothing goes below the horizon and the row on it is missing or
+        lies below the jump. All problems together, each with its cell.
     """
     frequency = np.asarray(frequency_mhz, dtype=float)
     theta, phi = np.asarray(theta_deg, dtype=float), np.asarray(phi_deg, dtype=float)
@@ -121,6 +124,7 @@ def far_field(
     problems = []
     table = _closed(table, source, problems)
     table = _one_pole(table, source, problems)
+    table = _dark_half_cut(table, source, problems)
     problems += [
         f"{source}: the power at {table.frequency_mhz[number]:g} MHz is zero everywhere"
         for number in np.flatnonzero(~(table.power > 0.0).any(axis=(1, 2)))
@@ -228,6 +232,52 @@ def _gaps_noted(table: _Table) -> _Table:
     for low, high in frequency_spline(table.frequency_mhz, None).gaps_mhz:
         table = table.noted(f"a gap in frequency: none between {low:g} and {high:g} MHz, joined by the spline")
     return table
+
+
+def _dark_half_cut(table: _Table, source: str, problems: list[str]) -> _Table:
+    """Without the rows of nothing below the horizon: a spline through the jump to them would ring on both sides."""
+    theta, power = table.theta_deg, table.power
+    below = theta > 90.0
+    if not below.any() or below.all() or (power[:, below].max(axis=(1, 2)) > NOTHING * power.max(axis=(1, 2))).any():
+        return table
+    if 90.0 not in theta:
+        beside = power[:, np.flatnonzero(~below)[-1]]
+        if (beside.max(axis=1) <= AGREEMENT * power.max(axis=(1, 2))).all():
+            return table  # it fades away by itself
+        problems.append(
+            f"{source}: nothing is radiated below theta 90 deg, and no row stands there; the pattern may jump at the "
+            "horizon: give a row at 90 deg with what is radiated just above it"
+        )
+        return table
+    note = "nothing is radiated below theta 90 deg: taken as an upper half"
+    table = table.taken(1, np.flatnonzero(~below)).noted(note)
+    problems += [f"{source}: {line}" for line in _horizon_problems(table)]
+    return table
+
+
+def _horizon_problems(table: _Table) -> list[str]:
+    """A row on the horizon that belongs to the dark side of a jump, or stands halfway: zero, or the mean of both.
+
+    It is held against the parabola through the three rows above, as means over phi. The steep fall over real ground is
+    no such jump: it bends down towards the horizon.
+    """
+    if len(table.theta_deg) < 4:
+        return []
+    at = table.theta_deg[-4:]
+    rows = table.power[:, -4:].mean(axis=2)
+    weight = [np.prod([(90.0 - other) / (one - other) for other in at[:3] if other != one]) for one in at[:3]]
+    expected, beside, horizon = rows[:, :3] @ np.array(weight), rows[:, 2], rows[:, 3]
+    peak = table.power.max(axis=(1, 2))
+    jumps = (expected - horizon > STEEP * beside) & (horizon < beside) & (beside > AGREEMENT * peak)
+    if not jumps.any():
+        return []
+    worst = int(np.argmax(np.where(jumps, (expected - horizon) / np.where(beside > 0.0, beside, 1.0), 0.0)))
+    return [
+        f"nothing is radiated below theta 90 deg, and the power falls from {beside[worst]:.3g} at theta {at[2]:g} to "
+        f"{horizon[worst]:.3g} at 90 deg ({table.frequency_mhz[worst]:g} MHz, means over phi), where the rows above "
+        f"lead to {expected[worst]:.3g}: the row at 90 deg must hold what is radiated just above the horizon; if it "
+        "does, give finer steps there"
+    ]
 
 
 def _closed(table: _Table, source: str, problems: list[str]) -> _Table:

@@ -181,7 +181,7 @@ def _taken_at_once(table: NecPattern, number: int, text: str) -> bool:
     words = text.split()
     if len(words) == COLUMNS + 1 and words[_SENSE] in _SENSES:
         del words[_SENSE]
-    if len(words) != COLUMNS:
+    if len(words) != COLUMNS or "_" in text or not text.isascii():  # Python takes 1_0 for ten, and digits of any script
         return False
     try:
         values = [float(word) for word in words]

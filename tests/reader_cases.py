@@ -45,18 +45,23 @@ def on_grid(pattern: Pattern, theta_deg: np.ndarray = THETA_DEG, phi_deg: np.nda
     return values.T.reshape(len(FREQUENCY_MHZ), len(theta_deg), len(phi_deg))
 
 
-def write_netcdf(folder: Path, power: np.ndarray, phi_deg: np.ndarray = PHI_DEG) -> NetcdfSource:
+def write_netcdf(
+    folder: Path, power: np.ndarray, phi_deg: np.ndarray = PHI_DEG, theta_deg: np.ndarray = THETA_DEG
+) -> NetcdfSource:
     path = folder / "beam.nc"
-    axes = {"frequency": (FREQUENCY_MHZ * 1e6, "Hz"), "theta": (np.radians(THETA_DEG), "rad"), "phi": (phi_deg, "deg")}
+    axes = {"frequency": (FREQUENCY_MHZ * 1e6, "Hz"), "theta": (np.radians(theta_deg), "rad"), "phi": (phi_deg, "deg")}
     coords = {name: (name, values, {"units": unit}) for name, (values, unit) in axes.items()}
     xr.Dataset({"gain": (tuple(axes), power)}, coords=coords).to_netcdf(path, engine="h5netcdf")
     return NetcdfSource(format="netcdf", file=path, variable="gain")
 
 
-def table_text(power: np.ndarray, *, elevation: bool = False, compass: bool = False, decibels: bool = False) -> str:
+def table_text(
+    power: np.ndarray, theta_deg: np.ndarray = THETA_DEG, *,
+    elevation: bool = False, compass: bool = False, decibels: bool = False,
+) -> str:  # fmt: skip
     lines = ["MHz;theta;phi;power"]
     for i, frequency in enumerate(FREQUENCY_MHZ):
-        for j, theta in enumerate(THETA_DEG):
+        for j, theta in enumerate(theta_deg):
             for k, phi in enumerate(PHI_DEG):
                 first = 90 - theta if elevation else theta
                 second = (90 - phi) % 360 if compass else phi
@@ -82,9 +87,9 @@ def table_source(path: Path, **changes: object) -> TableSource:
     return TableSource(**(settings | changes))  # type: ignore[arg-type]
 
 
-def write_table(folder: Path, power: np.ndarray, **conventions: bool) -> TableSource:
+def write_table(folder: Path, power: np.ndarray, theta_deg: np.ndarray = THETA_DEG, **conventions: bool) -> TableSource:
     path = folder / "beam.csv"
-    path.write_text(table_text(power, **conventions))
+    path.write_text(table_text(power, theta_deg, **conventions))
     return table_source(
         path,
         theta_from="horizon" if conventions.get("elevation") else "zenith",

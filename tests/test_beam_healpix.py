@@ -77,6 +77,33 @@ def test_a_file_cut_short_is_named(tmp_path: Path) -> None:
             read_healpix_files(source)
 
 
+@pytest.mark.filterwarnings("ignore::astropy.utils.exceptions.AstropyWarning")
+@pytest.mark.parametrize("keyword", ["ORDERING", "TTYPE1 ", "TFORM1 ", "TFORM2 ", "PCOUNT ", "NAXIS2 ", "TFIELDS"])
+def test_a_damaged_header_is_named(keyword: str, tmp_path: Path) -> None:
+    source = write_healpix(tmp_path, tilted, nside=8)
+    whole = source.files[0].read_bytes()
+    place = whole.rindex(keyword.encode())
+    told = []
+    for damage in (b"\xff", b"="):
+        for offset in (0, 9, 11):
+            source.files[0].write_bytes(whole[: place + offset] + damage + whole[place + offset + 1 :])
+            try:
+                table = read_healpix_files(source)
+            except InputError as error:
+                told += error.problems
+            else:  # not all of the header is needed
+                assert table.power.shape[0] == len(FREQUENCY_MHZ)
+    assert all("beam.fits: " in line for line in told)
+
+
+def test_infinite_pixels_are_named(tmp_path: Path) -> None:
+    values = np.ones(768)
+    values[[5, 9]] = np.inf
+    hp.write_map(tmp_path / "infinite.fits", values, dtype=np.float64)
+    with pytest.raises(InputError, match=r"column 1: 2 pixels missing or not finite, first 5 in ring order"):
+        read_healpix_files(source_of(tmp_path / "infinite.fits"))
+
+
 def table_file(path: Path, values: dict[str, np.ndarray], **header: str) -> Path:
     unit = fits.BinTableHDU.from_columns([fits.Column(name, "D", array=column) for name, column in values.items()])
     unit.header.update(header)

@@ -79,3 +79,30 @@ def test_a_file_cut_short_is_named(dataset: xr.Dataset, tmp_path: Path) -> None:
     path.write_bytes(path.read_bytes()[:20000])
     with pytest.raises(InputError, match=r"changed\.nc: cannot be read as NetCDF-4"):
         read_netcdf_file(NetcdfSource(format="netcdf", file=path, variable="gain"))
+
+
+@pytest.mark.filterwarnings("ignore::pytest.PytestUnraisableExceptionWarning")  # h5netcdf's, closing what never opened
+def test_a_damaged_file_is_named(dataset: xr.Dataset, tmp_path: Path) -> None:
+    """A byte wrong among the headers, which hold checksums; each is told in another way by the libraries below."""
+    path = written(tmp_path, dataset)
+    whole = path.read_bytes()
+    told = []
+    for place in range(0, 6000, 150):
+        path.write_bytes(whole[:place] + bytes([whole[place] ^ 0xFF]) + whole[place + 1 :])
+        try:
+            table = read_netcdf_file(NetcdfSource(format="netcdf", file=path, variable="gain"))
+        except InputError as error:
+            told += error.problems
+        else:
+            assert table.power.shape == POWER.shape
+    assert len(told) > 5
+    assert all("changed.nc: " in line for line in told)
+
+
+def test_decibels_beyond_all_numbers_are_named_by_their_cell(dataset: xr.Dataset, tmp_path: Path) -> None:
+    values = 10.0 * np.log10(POWER)
+    values[1, 20, 30] = 9999.0
+    dataset["gain"] = (DIMS, values)
+    path = written(tmp_path, dataset)
+    with pytest.raises(InputError, match=r"not finite in 1 of \d+ cells: 70 MHz, theta 60, phi 90: inf"):
+        read_netcdf_file(NetcdfSource(format="netcdf", file=path, variable="gain", unit="dBi"))

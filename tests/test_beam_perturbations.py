@@ -12,9 +12,9 @@ from pydantic import ValidationError
 from reader_cases import FREQUENCY_MHZ, PHI_DEG, on_grid, write_netcdf
 from table_cases import LOSSLESS, dipole, few_sources, gaussian, random_directions
 
-from sims import config
+from sims import beam_files, config
 from sims.beam import beam_from
-from sims.beam_files import antenna_from, read_far_field
+from sims.beam_files import _Kept, antenna_from, read_far_field
 from sims.beam_grid import GridBeam
 from sims.config_beam import BeamMode, FileBeam, NecSource, NetcdfSource
 from sims.errors import InputError
@@ -178,6 +178,36 @@ def test_files_are_read_once_until_they_change(tmp_path: Path) -> None:
     write_netcdf(tmp_path / "one", power)
     path = source.file
     assert read_far_field(source).power == pytest.approx(power, rel=1e-12), path
+
+
+def test_tables_are_kept_up_to_a_size_and_the_last_whatever_it_is(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    sources = [stored(tmp_path / f"beam{seed}", seed) for seed in (7, 8, 9)]
+    size = read_far_field(sources[0]).power.nbytes
+    kept = _Kept(int(2.5 * size))
+    monkeypatch.setattr(beam_files, "_KEPT", kept)
+    first, second = read_far_field(sources[0]), read_far_field(sources[1])
+    assert read_far_field(sources[0]) is first
+    third = read_far_field(sources[2])  # the second was used longest ago
+    assert list(kept.tables) == [sources[0], sources[2]]
+    assert read_far_field(sources[0]) is first
+    assert read_far_field(sources[2]) is third
+    assert read_far_field(sources[1]) is not second
+    kept.limit_bytes = size // 2
+    last = read_far_field(sources[0])
+    assert read_far_field(sources[0]) is last
+    assert list(kept.tables) == [sources[0]]
+
+
+def test_a_table_that_changed_does_not_stay_beside_its_old_one(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    kept = _Kept(2**30)
+    monkeypatch.setattr(beam_files, "_KEPT", kept)
+    source = stored(tmp_path / "one", 7)
+    first = read_far_field(source)
+    write_netcdf(tmp_path / "one", 2.0 * first.power)
+    assert read_far_field(source).power == pytest.approx(2.0 * first.power, rel=1e-12)
+    assert len(kept.tables) == 1
 
 
 def test_normalisation_is_declared_not_divided_away(tmp_path: Path) -> None:

@@ -52,6 +52,7 @@ ORDER = (
     "sims.sky",
     "sims.beam",
     "sims.beam_spline",
+    "sims.beam_error",
     "sims.beam_smooth",
     "sims.far_field",
     "sims.nec_printout",

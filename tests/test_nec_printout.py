@@ -101,6 +101,13 @@ BAD: dict[str, tuple[Edit, str]] = {
     "power left out": (value_of("INPUT POWER", ""), "an input power must be a positive number, got ''"),
     "stars for an angle": (column(FIRST_ROW + 1, 1, "*****"), f"line {FIRST_ROW + 1}: '*****' is not a number"),
     "too large": (column(FIRST_ROW + 1, 9, "1.0E+400"), f"line {FIRST_ROW + 1}: '1.0E+400' is not a number"),
+    "square too large": (column(FIRST_ROW + 1, 9, "1.0E+200"), f"line {FIRST_ROW + 1}: the printed gain lies"),
+    "underscore": (column(FIRST_ROW + 1, 10, "1_0.00"), f"line {FIRST_ROW + 1}: '1_0.00' is not a number"),
+    "underscore in an angle": (column(FIRST_ROW + 1, 1, "3_0.00"), f"line {FIRST_ROW + 1}: '3_0.00' is not a number"),
+    "digits of another script": (
+        column(FIRST_ROW + 1, 10, "\N{ARABIC-INDIC DIGIT FIVE}.00"),
+        f"line {FIRST_ROW + 1}: '\N{ARABIC-INDIC DIGIT FIVE}.00' is not",
+    ),
     "negative magnitude": (column(FIRST_ROW + 1, 9, "-3.6468E-02"), f"line {FIRST_ROW + 1}: the magnitude of a field"),
     # The second row has 0.036468 V: its exponent off, a digit off (0.235 dB); and a gain that no field bears out.
     "exponent off": (column(FIRST_ROW + 1, 9, "3.6468E+01"), f"line {FIRST_ROW + 1}: the printed gain lies"),
