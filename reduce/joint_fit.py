@@ -170,6 +170,7 @@ def joint_fit(
         if at_rest or rounds == MOST_ROUNDS:
             break
         fiducial_k = found_k
+    information = with_whole_determinants(information, subtraction, covariance_modes_k(chosen, fiducial_k))
     removed = removed_from_signal(
         subtraction,
         frequency_mhz=frequency,
@@ -209,6 +210,17 @@ def with_known_modes(spectra: xr.Dataset, known: KnownForeground) -> xr.Dataset:
         systematic_modes=(("mode", "bin", "channel"), modes_k), response_modes=(("mode", "bin", "channel"), response)
     )
     return describe(found, SPECTRA)
+
+
+def with_whole_determinants(information: Information, fit: Subtraction, modes_k: FloatArray) -> Information:
+    """The same information with the determinants of the whole covariance.
+
+    The fit knows the modes only beyond the free foreground (`beyond_foreground_k`): chi-squared is the
+    same, but an absolute likelihood wants the volume that they have along it too.
+    """
+    whole = DiagonalLowRank(fit.covariance.noise_variance_k2, modes_k[fit.good])
+    nuisance = factor_basis(whole.whiten(fit.basis), "foreground basis").log_det
+    return replace(information, log_det_covariance=whole.log_det, log_det_nuisance=nuisance)
 
 
 def beyond_foreground_k(modes_k: FloatArray, fit: Subtraction) -> FloatArray:

@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from reduce.binning import bin_of_each_sample, mean_by_bin
 from reduce.knowledge_modes import SAMPLES_PER_BIN, engine_runs
+from reduce.redraw import SCORES, moving_leaves
 from sims.campaign import engine_passes, scene_of
 from sims.config import ORBIT_KINDS, Config
 from sims.config_load import load_config
@@ -27,6 +28,8 @@ from sims.sky_average import evaluate
 from sims.vantage import full_geometry, survey_geometry
 
 TIMED_SAMPLES = 16
+PASSES_A_MEAN_BEAM = 2.0  # of the engine, in time
+SECONDS_A_SKY_NUMBER = 6e-8  # of a redraw, a pixel and node
 BYTES_PER_NUMBER = 8
 ARRAYS_PER_SAMPLE = 8
 
@@ -145,4 +148,21 @@ def _noise_and_cost(config: Config, geometry: xr.Dataset) -> str:
         f"  engine time      about {np.ceil(seconds):.0f} s ({per_sample_s * 1e3:.1f} ms a sample)",
         f"  memory           about {np.ceil(memory / 1e6):.0f} MB beside the libraries",
     ]
+    if config.foreground.draws is not None:
+        lines.append(_ensemble_cost(config, config.foreground.draws, per_sample_s * samples))
     return "\n".join(lines)
+
+
+def _ensemble_cost(config: Config, draws: int, engine_pass_s: float) -> str:
+    """Time and memory of the ensemble: mean beams first, as many as the leaves that move the beam ask for."""
+    leaves = len(moving_leaves(config))
+    fewest = 1 + len(SCORES) * leaves
+    most = fewest + 4 * leaves * (leaves - 1) // 2
+    pixels = 12 * config.sky.nside**2 * config.engine.nodes
+    beam_s, draw_s = PASSES_A_MEAN_BEAM * engine_pass_s, SECONDS_A_SKY_NUMBER * pixels
+    table = pixels * config.bins.count * BYTES_PER_NUMBER
+    span = f"{fewest}" if most == fewest else f"{fewest} to {most}"
+    return (
+        f"  ensemble         {span} mean beams of about {np.ceil(beam_s):.0f} s and {table / 1e6:.0f} MB each, then "
+        f"{draws} draws of about {draw_s * 1e3:.0f} ms"
+    )

@@ -73,6 +73,34 @@ def test_log_likelihood_of_the_bundle_equals_that_of_all_bins(
     assert ours - ours[0] == pytest.approx(reference - reference[0], abs=1e-5)
 
 
+def test_absolute_likelihood_is_that_of_the_whole_covariance(
+    case: tuple[xr.Dataset, JointFit, TroughModel],
+) -> None:
+    """Profiled over the foreground, and with it integrated out, against dense Gaussian algebra."""
+    _, fit, model = case
+    packed = bundle(fit)
+    information = information_from(packed)
+    good = packed["flag"].values == 0
+    modes = covariance_modes_k(packed, packed["fiducial_signal_k"].values)[good]
+    covariance = np.diag(packed["noise_variance"].values[good]) + modes @ modes.T
+    basis = fit.subtraction.basis
+    signal_k = model.signal_k(np.array([48.0, 71.0, 101.0, -6.0, -105.0, 22.0]))
+    left = (packed["residual_k"].values - packed["signal_response"].values * signal_k)[good]
+    # Scaled by the noise, the dense matrices keep their digits.
+    scale = np.sqrt(packed["noise_variance"].values[good])
+    root = np.linalg.cholesky(covariance / np.outer(scale, scale))
+    white, tangent = np.linalg.solve(root, left / scale), np.linalg.solve(root, basis / scale[:, None])
+    axes, triangle = np.linalg.qr(tangent)
+    rest = white - axes @ (axes.T @ white)
+    log_det = 2.0 * np.log(np.diag(root)).sum() + 2.0 * np.log(scale).sum()
+    profiled = -0.5 * (rest @ rest + log_det + len(left) * np.log(2.0 * np.pi))
+    marginal = profiled + 0.5 * (basis.shape[1] * np.log(2.0 * np.pi) - 2.0 * np.log(np.abs(np.diag(triangle))).sum())
+    ours = float(information.log_likelihood(signal_k))
+    # Modes a million times the noise leave the dense reference ten digits of chi-squared.
+    assert ours + information.log_constant == pytest.approx(profiled, abs=1e-3)
+    assert ours + information.log_constant_marginal == pytest.approx(marginal, abs=1e-3)
+
+
 def test_information_form_is_its_own_square_root(case: tuple[xr.Dataset, JointFit, TroughModel]) -> None:
     information = case[1].information
     scale = np.abs(information.K).max()

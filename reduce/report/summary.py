@@ -247,7 +247,14 @@ def _trust(products: Products) -> list[str]:
 
 
 def _flags(products: Products) -> list[str]:
-    return [f"! {flag}" for flag in products["turning_points.json"]["flags"]] or ["none"]
+    flags = list(products["turning_points.json"]["flags"])
+    numbers = products.dataset("bundle.nc").attrs
+    if not numbers.get("fiducial_at_rest", 1):
+        flags.append(
+            f"the signal at which the response's error is taken did not come to rest in {numbers['fiducial_rounds']} "
+            "rounds: the response is known too badly for a covariance that does not depend on the signal"
+        )
+    return [f"! {flag}" for flag in flags] or ["none"]
 
 
 def _left_out(products: Products, config: FitConfig) -> list[str]:
