@@ -52,7 +52,7 @@ def run(config: ConfigFile, out: OutFolder, update: Update = False) -> None:
     """Observe a mock campaign and reduce it to turning points.
 
     Writes spectra.nc, truth.nc, bundle.nc, posterior.nc, turning_points.json,
-    combined_spectrum.txt, five plots, summary.txt, run.json and log.txt. Run again, it
+    combined_spectrum.txt, transfer.nc, six plots, gas.txt, summary.txt, run.json and log.txt. Run again, it
     reuses what still holds; a folder of another configuration is refused without --update.
     """
     from reduce.pipeline import run as run_campaign  # noqa: PLC0415
@@ -157,6 +157,49 @@ def beam(
 
     with _complaints():
         typer.echo(report_beam(config, out, update=update))
+
+
+@app.command()
+def compare(
+    source: Annotated[
+        Path,
+        typer.Argument(
+            metavar="CONFIG|DIR",
+            help="Folder of a run, or a configuration, whose mock is then observed first.",
+            show_default=False,
+        ),
+    ],
+    out: Annotated[
+        Path | None, typer.Option("--out", metavar="DIR", help="Folder for page, table and plot; none: print only.")
+    ] = None,
+    families: Annotated[
+        str | None,
+        typer.Option("--families", metavar="A,B", help="Foreground families to try; all by default."),
+    ] = None,
+    terms: Annotated[
+        str | None,
+        typer.Option("--terms", metavar="N-M", help="Numbers of terms to try, 4-10 or 5,7; 4-10 by default."),
+    ] = None,
+    update: Update = False,
+) -> None:
+    """Fit many foregrounds: how much is enough?
+
+    Prints for each family and number of terms chi-squared, AIC, BIC, evidence, cross-validation, whiteness of the
+    residuals and the turning points, and marks one row by a stated rule. With --out writes compare.txt, compare.csv and
+    compare.png. Files already there are refused without --update.
+    """
+    from reduce.report.compare_page import numbers_from, report_compare  # noqa: PLC0415
+
+    with _complaints(), _bars() as progress:
+        page = report_compare(
+            source,
+            out,
+            families=None if families is None else [name.strip() for name in families.split(",")],
+            terms=None if terms is None else numbers_from(terms),
+            update=update,
+            progress=progress,
+        )
+    typer.echo(page)
 
 
 @app.command()

@@ -35,6 +35,7 @@ from reduce.report.plots import plots
 from reduce.report.summary import summary
 from reduce.runner import Made, Outcome, Products, Progress, Stage, Tools, run_stages
 from reduce.spectra import read_spectra
+from reduce.transfer import transfer
 from reduce.trough_model import TroughModel, trough_model
 from reduce.turning_points import ENSEMBLES, Posterior, sample_posterior, summarise
 from sims.campaign import engine_passes, observe
@@ -149,6 +150,12 @@ def write_spectrum(products: Products, config: FitConfig, tools: Tools) -> Made:
     return {"combined_spectrum.txt": combined_spectrum_text(products.dataset("bundle.nc"))}
 
 
+def judge_transfer(products: Products, config: FitConfig, tools: Tools) -> Made:
+    """Bundle -> what of any signal survives the subtraction, as a matrix and by shape."""
+    packed = products.dataset("bundle.nc")
+    return {"transfer.nc": transfer(packed, _model(packed, config), stream(config.run.seed, "transfer"))}
+
+
 def report(products: Products, config: FitConfig, tools: Tools) -> Made:
     """Everything -> plots and the summary."""
     pictures = plots(products, config, _model(products.dataset("bundle.nc"), config))
@@ -159,7 +166,7 @@ def report(products: Products, config: FitConfig, tools: Tools) -> Made:
     }
 
 
-PICTURES = ("spectra.png", "residuals.png", "trough.png", "turning_points.png", "transfer.png")
+PICTURES = ("spectra.png", "residuals.png", "trough.png", "turning_points.png", "transfer.png", "shapes.png")
 
 _OBSERVE = Stage(
     name="observe",
@@ -193,6 +200,14 @@ _SPECTRUM = Stage(
     makes=("combined_spectrum.txt",),
     work=write_spectrum,
 )
+_TRANSFER = Stage(
+    name="transfer",
+    title="judge what the subtraction takes away",
+    sections=("run", "turning_points"),
+    needs=("bundle.nc",),
+    makes=("transfer.nc",),
+    work=judge_transfer,
+)
 
 
 def _subtract(more: tuple[str, ...]) -> Stage:
@@ -211,26 +226,24 @@ def _report(more: tuple[str, ...]) -> Stage:
         name="report",
         title="draw and sum up",
         sections=("run", "foreground", "turning_points"),
-        needs=("spectra.nc", *more, "bundle.nc", "posterior.nc", "turning_points.json"),
+        needs=("spectra.nc", *more, "bundle.nc", "transfer.nc", "posterior.nc", "turning_points.json"),
         makes=(*PICTURES, "gas.txt", "summary.txt"),
         work=report,
     )
 
 
-STAGES = (_OBSERVE, _subtract(()), _TURNING_POINTS, _SPECTRUM, _report(("truth.nc",)))
+_AFTER = (_TURNING_POINTS, _SPECTRUM, _TRANSFER)
+
+STAGES = (_OBSERVE, _subtract(()), *_AFTER, _report(("truth.nc",)))
 """The whole way of a mock campaign."""
 
-ENSEMBLE_STAGES = (
-    _OBSERVE, _ENSEMBLE, _subtract(("ensemble.nc",)), _TURNING_POINTS, _SPECTRUM, _report(("truth.nc", "ensemble.nc")),
-)  # fmt: skip
+ENSEMBLE_STAGES = (_OBSERVE, _ENSEMBLE, _subtract(("ensemble.nc",)), *_AFTER, _report(("truth.nc", "ensemble.nc")))
 """The same with simulated campaigns as the foreground."""
 
-FIT_STAGES = (_subtract(()), _TURNING_POINTS, _SPECTRUM, _report(()))
+FIT_STAGES = (_subtract(()), *_AFTER, _report(()))
 """The way of spectra that somebody measured."""
 
-ENSEMBLE_FIT_STAGES = (
-    _ENSEMBLE, _subtract(("ensemble.nc",)), _TURNING_POINTS, _SPECTRUM, _report(("ensemble.nc",)),
-)  # fmt: skip
+ENSEMBLE_FIT_STAGES = (_ENSEMBLE, _subtract(("ensemble.nc",)), *_AFTER, _report(("ensemble.nc",)))
 """The same with simulated campaigns as the foreground."""
 
 

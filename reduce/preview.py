@@ -16,8 +16,8 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from reduce.binning import bin_of_each_sample, mean_by_bin
-from reduce.knowledge_modes import SAMPLES_PER_BIN, engine_runs
-from reduce.redraw import SCORES, moving_leaves
+from reduce.knowledge_modes import MOVED_SAMPLES_PER_BIN, SAMPLES_PER_BIN, engine_runs, moving_leaves
+from reduce.redraw import SCORES
 from sims.campaign import engine_passes, scene_of
 from sims.config import ORBIT_KINDS, Config
 from sims.config_load import load_config
@@ -132,7 +132,9 @@ def _noise_and_cost(config: Config, geometry: xr.Dataset) -> str:
     )
     mean_response = response.mean(axis=0)
     samples = geometry.sizes["time"]
-    thin = min(SAMPLES_PER_BIN * config.bins.count, samples) * engine_runs(config)
+    moved = 2 * len(moving_leaves(config))
+    thin = min(SAMPLES_PER_BIN * config.bins.count, samples) * (engine_runs(config) - moved)
+    thin += min(MOVED_SAMPLES_PER_BIN * config.bins.count, samples) * moved
     seconds = per_sample_s * (samples * engine_passes(config) + thin)
     memory = samples * grid.count * BYTES_PER_NUMBER * ARRAYS_PER_SAMPLE
     memory += 12 * config.sky.nside**2 * config.engine.nodes * BYTES_PER_NUMBER * 3

@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from scipy import stats
 
 from reduce.binning import bin_of_each_sample, mean_by_bin
-from reduce.knowledge_modes import thinned
+from reduce.knowledge_modes import moving_leaves, thinned
 from sims.beam_files import antenna_from
 from sims.campaign import geometry_like, scene_of, simulate
 from sims.config import Config
@@ -39,14 +39,6 @@ Bars = Callable[[str, int], AbstractContextManager[Callable[[int], None]]]
 NEGLIGIBLE_K = 5e-5
 ABSORBING_TERMS = 6
 SCORES = (-3.0, -1.5, 1.5, 3.0)  # of the unit normal, at which a leaf is tabulated beside its configured value
-# What acts on the sums over pixels, not in them: exact for any value.
-OUTSIDE_THE_SUMS = (
-    "beam.efficiency",
-    "beam.structure_temperature_k",
-    "surface.temperature_k",
-    "surface.polar_temperature_k",
-    "surface.temperature_exponent",
-)
 
 
 @dataclass(frozen=True, eq=False)
@@ -169,15 +161,6 @@ def tabulated_values(leaf: Known, configured: float) -> FloatArray:
 def _ends(values: FloatArray) -> FloatArray:
     """The configured value and the two outermost tabulated ones."""
     return values[[0, 1, -1]]
-
-
-def moving_leaves(config: Config) -> list[Known]:
-    """Leaves of ``[knowledge]`` that move the beam on the sky."""
-    return [
-        leaf
-        for leaf in config.knowledge.leaves
-        if leaf.path.split(".")[0] in ("beam", "vantage", "surface") and leaf.path not in OUTSIDE_THE_SUMS
-    ]
 
 
 def redrawer(config: Config, progress: Bars) -> Redrawer:

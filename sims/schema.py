@@ -119,6 +119,17 @@ BUNDLE: Product = {
     "z": Variable(("rank",), "1", "data of the square root"),
 }  # fmt: skip
 
+TRANSFER: Product = {
+    **_CHANNELS,
+    "operator": Variable(("channel", "channel_2"), "1", "what the projected spectrum shows of a signal, applied to it"),
+    "survival": Variable(("shape",), "1", "information with the foreground over that of noise alone, lowest first"),
+    "shape_k": Variable(
+        ("shape", "channel"), "K", "shape of each, one standard deviation of the noise alone; 0 where not used"
+    ),
+    "trough_survival": Variable(("trough_shape",), "1", "the same among shapes that the prior's troughs are made of"),
+    "trough_shape_k": Variable(("trough_shape", "channel"), "K", "shape of each, as shape_k"),
+}  # fmt: skip
+
 
 def describe(dataset: xr.Dataset, product: Product) -> xr.Dataset:
     """Copy of `dataset` with the `units` and `long_name` of its product on every variable.

@@ -16,7 +16,7 @@ from reduce import pipeline, preview, starter
 from reduce.cli import EXIT_FAILED, EXIT_INPUT, app
 from sims.config_load import load_config
 
-COMMANDS = ("run", "fit", "check", "new", "timeline", "sky", "beam")
+COMMANDS = ("run", "fit", "check", "compare", "new", "timeline", "sky", "beam")
 
 
 def call(*words: str | Path) -> Any:
@@ -60,8 +60,8 @@ def test_help_names_every_product_of_a_run() -> None:
     made = [name for stage in pipeline.STAGES for name in stage.makes if not name.endswith(".png")]
     assert all(name in text for name in [*made, "run.json", "log.txt"])
     plots = [name for stage in pipeline.STAGES for name in stage.makes if name.endswith(".png")]
-    assert len(plots) == 5
-    assert "five plots" in text
+    assert len(plots) == 6
+    assert "six plots" in text
 
 
 @pytest.mark.parametrize(

@@ -36,6 +36,7 @@ from reduce.report.transfer_plot import measured_shapes, transfer_figure
 from reduce.report.trough_plot import trough_figure
 from reduce.report.turning_points_plot import CELLS, highest_density_level, smooth_density, turning_points_figure
 from reduce.runner import Products
+from reduce.transfer import transfer
 from reduce.trough_model import TroughModel, trough_model
 from reduce.turning_points import sample_posterior, summarise
 from sims.config import Config, FitConfig, NoSignal
@@ -43,7 +44,7 @@ from sims.config_load import load_config
 from sims.schema import SPECTRA, TRUTH, describe
 
 BINS, CHANNELS = 3, 96
-NAMES = {"spectra.png", "residuals.png", "trough.png", "turning_points.png", "transfer.png"}
+NAMES = {"spectra.png", "residuals.png", "trough.png", "turning_points.png", "transfer.png", "shapes.png"}
 
 
 @dataclass(frozen=True)
@@ -145,6 +146,7 @@ def case() -> Case:
     rng = np.random.default_rng(5)
     fit = joint_fit(products.dataset("spectra.nc"), config.foreground, model, rng)
     products["bundle.nc"] = bundle(fit)
+    products["transfer.nc"] = transfer(products.dataset("bundle.nc"), model, rng)
     information: Information = information_from(products.dataset("bundle.nc"))
     posterior = sample_posterior(information, model, config.turning_points, rng, lambda steps: None)
     products["posterior.nc"] = posterior.samples

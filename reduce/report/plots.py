@@ -7,6 +7,7 @@ of a truth is drawn.
 from __future__ import annotations
 
 from reduce.report.residuals_plot import residuals_figure
+from reduce.report.shapes_plot import shapes_figure
 from reduce.report.spectra_plot import spectra_figure
 from reduce.report.style import look, png
 from reduce.report.transfer_plot import transfer_figure
@@ -23,7 +24,7 @@ def plots(products: Products, config: FitConfig, model: TroughModel) -> dict[str
     Parameters
     ----------
     products : Products
-        With spectra.nc, bundle.nc, posterior.nc and turning_points.json; truth.nc is drawn
+        With spectra.nc, bundle.nc, transfer.nc, posterior.nc and turning_points.json; truth.nc is drawn
         where it is there.
     config : FitConfig
         Of the run; a whole `Config` for a mock.
@@ -42,4 +43,5 @@ def plots(products: Products, config: FitConfig, model: TroughModel) -> dict[str
             "trough.png": png(trough_figure(products, config, model)),
             "turning_points.png": png(turning_points_figure(products, config, model)),
             "transfer.png": png(transfer_figure(products, config, model)),
+            "shapes.png": png(shapes_figure(products, config)),
         }

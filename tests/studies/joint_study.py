@@ -93,7 +93,8 @@ def fit_one(bench: MockBench, terms: int | None, temperature_k: np.ndarray, resp
     spectra, truth = mock_spectra(bench, temperature_k, response, number, None)
     rng = stream(bench.config.run.seed, f"{STREAM}/reduction", number)
     if terms is None:
-        fit = joint_fit(spectra.drop_dims("mode"), bench.config.foreground, bench.model, rng, bench.ensemble, bench.bank)
+        own = spectra.drop_dims("mode")
+        fit = joint_fit(own, bench.config.foreground, bench.model, rng, bench.ensemble, bench.bank)
     else:
         settings = Foreground(family="log-polynomial", terms=terms)
         fit = joint_fit(averaged(spectra), settings, bench.model, rng, None, bench.bank)
@@ -130,13 +131,16 @@ def line(title: str, found: list[Found]) -> bool:
     sd = np.median([f.sd for f in found], axis=0)
     mean, width = pull.mean(axis=0), np.sqrt((pull**2).mean(axis=0))
     slack = 2.0 / np.sqrt(len(found))
-    fine = bool((np.abs(mean) < UNBIASED + slack).all() and (width > WIDTH[0]).all() and (width < WIDTH[1] + slack).all())
+    fine = (np.abs(mean) < UNBIASED + slack) & (width > WIDTH[0]) & (width < WIDTH[1] + slack)
     ratio = np.median([f.sd / f.bound for f in found], axis=0)
     chi = np.mean([f.chi_squared / f.degrees_of_freedom for f in found])
-    print(f"{title:24} C {sd[1]:6.3f} MHz {sd[4]:7.2f} mK  chi2/dof {chi:.3f}  " + ("unbiased" if fine else "BIASED"))
+    print(
+        f"{title:24} C {sd[1]:6.3f} MHz {sd[4]:7.2f} mK  chi2/dof {chi:.3f}  "
+        + ("unbiased" if fine.all() else "BIASED")
+    )
     for name, row in (("mean pull", mean), ("pull width", width), ("error / its bound", ratio)):
         print(f"   {name:18}" + "".join(f"{value:9.3f}" for value in row))
-    return fine
+    return bool(fine.all())
 
 
 def main() -> None:
