@@ -16,7 +16,18 @@ from typing import Any, TypeVar, get_type_hints
 from pydantic import TypeAdapter, ValidationError
 
 from sims.config import FORWARD_SECTIONS, Config, FitConfig, cross_problems
-from sims.config_paths import Place, allowed_keys, descend, follow, is_number, model_at, models_of, root, value_at
+from sims.config_paths import (
+    Place,
+    allowed_keys,
+    descend,
+    follow,
+    is_number,
+    model_at,
+    models_of,
+    root,
+    tag_of,
+    value_at,
+)
 from sims.errors import InputError, raise_if_any
 from sims.knowledge import Knowledge, Known
 from sims.quantities import Section, plain_name
@@ -148,10 +159,11 @@ def _line(item: Any, section: Place) -> str:
     if item["type"] == "missing":
         return f"{path}: missing"
     if item["type"].startswith("union_tag"):
-        kinds = [model.model_fields["kind"] for model in models_of(place.annotation)]
-        names = ", ".join(f'"{kind}"' for field in kinds for kind in _literals(field.annotation))
-        got = place.raw.get("kind", "nothing") if isinstance(place.raw, dict) else repr(place.raw)
-        return f"{path}.kind: got {got!r}; allowed are {names}"
+        models = models_of(place.annotation)
+        tag = tag_of(models)
+        names = ", ".join(f'"{kind}"' for model in models for kind in _literals(model.model_fields[tag].annotation))
+        got = place.raw.get(tag, "nothing") if isinstance(place.raw, dict) else repr(place.raw)
+        return f"{path}.{tag}: got {got!r}; allowed are {names}"
     message = item["msg"].removeprefix("Value error, ")
     for pydantic_word, plain_word in PLAIN_WORDS:
         message = re.sub(pydantic_word, plain_word, message)
@@ -182,8 +194,8 @@ def _literals(annotation: Any) -> tuple[str, ...]:
 
 
 def _is_kind(place: Place, step: Any) -> bool:
-    return any(step in _literals(m.model_fields["kind"].annotation)
-               for m in models_of(place.annotation) if "kind" in m.model_fields)  # fmt: skip
+    models = models_of(place.annotation)
+    return len(models) > 1 and any(step in _literals(model.model_fields[tag_of(models)].annotation) for model in models)
 
 
 def _knowledge(table: Any, top: Place, unsound: set[str], problems: list[str]) -> Knowledge:

@@ -14,6 +14,9 @@ from pydantic import BaseModel
 from sims.quantities import InUnit, plain_name
 
 
+TAGS = ("kind", "format")  # keys that tell the members of a union apart
+
+
 @dataclass(frozen=True)
 class Place:
     """A place in the configuration: its type there, and what the file holds there."""
@@ -53,8 +56,14 @@ def model_at(place: Place) -> type[BaseModel] | None:
     models = models_of(place.annotation)
     if len(models) < 2:
         return models[0] if models else None
-    kind = place.raw.get("kind") if isinstance(place.raw, dict) else None
-    return next((model for model in models if kind in get_args(model.model_fields["kind"].annotation)), None)
+    tag = tag_of(models)
+    named = place.raw.get(tag) if isinstance(place.raw, dict) else None
+    return next((model for model in models if named in get_args(model.model_fields[tag].annotation)), None)
+
+
+def tag_of(models: list[type[BaseModel]]) -> str:
+    """The key that tells several kinds of a table apart."""
+    return next(name for name in TAGS if all(name in model.model_fields for model in models))
 
 
 def allowed_keys(model: type[BaseModel]) -> list[str]:

@@ -4,10 +4,12 @@ from __future__ import annotations
 
 from datetime import UTC, datetime
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
 from config_cases import DEMO, demo_with, load_text, substituted, with_knowledge
+from small_campaign import CONFIGS, small_tree
 
 from sims.config import FORWARD_SECTIONS, Channels, Config, Engine, FitConfig, cross_problems
 from sims.config_load import load_config, load_fit_config, parse_config
@@ -314,3 +316,20 @@ def test_paths_lead_through_tables_kinds_and_lists(tmp_path: Path) -> None:
 def test_a_table_in_memory_is_read_like_a_file(tmp_path: Path) -> None:
     with pytest.raises(InputError, match=r"^run: section \[run\] is missing"):
         parse_config({}, tmp_path)
+
+
+@pytest.mark.parametrize(
+    ("source", "line"),
+    [
+        ({"format": "nec", "files": ["a"], "gain": 1}, "beam.source.gain: unknown key; allowed are format, files"),
+        ({"format": "pdf"}, 'beam.source.format: got \'pdf\'; allowed are "nec", "table", "healpix", "netcdf"'),
+        ({"files": ["a"]}, "beam.source.format: got 'nothing'; allowed are"),
+    ],
+)
+def test_a_wrong_source_of_a_beam_is_told_by_its_path(source: dict[str, Any], line: str) -> None:
+    """Tables that are told apart by another key than `kind`."""
+    tree = small_tree(beam={"kind": "file", "source": source, "quantity": "gain", "missing_power": "efficiency"})
+    tree.pop("knowledge")
+    with pytest.raises(InputError) as error:
+        parse_config(tree, CONFIGS)
+    assert any(problem.startswith(line) for problem in error.value.problems), error.value.problems
