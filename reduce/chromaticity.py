@@ -119,7 +119,7 @@ def corrected(spectra: xr.Dataset, config: Config, advance: Callable[[int], None
     """
     known = chromaticity(config, advance)
     centre = spectra["frequency_mhz"].values
-    apart = received_k(known.apart_k, centre, config.receiver)
+    apart = received_k(known.apart_k, centre, spectra["width_mhz"].values, config.receiver)
     divided = spectra.copy()
     over = xr.DataArray(known.factor, dims=("bin", "channel"))
     divided["antenna_temperature_k"] = (spectra["antenna_temperature_k"] - apart) / over + apart

@@ -123,8 +123,8 @@ def redrawn(
     while changed := list(islice(campaigns, AT_ONCE)):
         antenna_k, reaching = ready.spectra(changed)
         for number, (config, _) in enumerate(changed):
-            temperature_k[row] = received_k(antenna_k[number], grid.centre_mhz, config.receiver)
-            response[row] = reaching[number] * gain(grid.centre_mhz, config.receiver)
+            temperature_k[row] = received_k(antenna_k[number], grid.centre_mhz, grid.width_mhz, config.receiver)
+            response[row] = reaching[number] * gain(grid.centre_mhz, grid.width_mhz, config.receiver)
             row += 1
         advance(len(changed))
     return DrawnSpectra(temperature_k, response)

@@ -206,8 +206,9 @@ def _binned(
     antenna_k = mean_by_bin(average.antenna_temperature_k, geometry, config.bins)
     if level is not None:
         antenna_k = level * antenna_k
-    response = mean_by_bin(average.signal_response, geometry, config.bins) * gain(grid.centre_mhz, config.receiver)
-    return received_k(antenna_k, grid.centre_mhz, config.receiver), response
+    channels = (grid.centre_mhz, grid.width_mhz)
+    response = mean_by_bin(average.signal_response, geometry, config.bins) * gain(*channels, config.receiver)
+    return received_k(antenna_k, *channels, config.receiver), response
 
 
 def _quiet(samples: int) -> None:

@@ -29,7 +29,7 @@ from reduce.redraw import Redrawer
 from reduce.trough_model import TroughModel, trough_model
 from sims.config import Config
 from sims.frequency import channel_grid
-from sims.receiver import gain, noise_variance_k2
+from sims.receiver import gain, noise_variance_k2, received_k
 from sims.schema import SPECTRA, describe
 from sims.streams import stream
 from sims.vantage import survey_geometry
@@ -104,7 +104,9 @@ def believed_spectra(ready: Redrawer) -> tuple[xr.Dataset, FloatArray]:
     geometry, grid = survey_geometry(config.vantage, config.observation), channel_grid(config.channels)
     label = bin_of_each_sample(geometry, config.bins)
     weight_s = sum_by_bin(geometry["integration_s"].values[:, None], label, config.bins.count)[:, 0]
-    temperature_k, response = ready.spectra([(config, ready.sky)])
+    antenna_k, response = ready.spectra([(config, ready.sky)])
+    temperature_k = received_k(antenna_k, grid.centre_mhz, grid.width_mhz, config.receiver)
+    factor = gain(grid.centre_mhz, grid.width_mhz, config.receiver)
     shape = temperature_k.shape[1:]
     empty = np.where(weight_s > 0.0, 0, 2).astype(np.uint8)[:, None]
     spectra = xr.Dataset(
@@ -113,7 +115,7 @@ def believed_spectra(ready: Redrawer) -> tuple[xr.Dataset, FloatArray]:
             "width_mhz": ("channel", grid.width_mhz),
             "antenna_temperature_k": (("bin", "channel"), temperature_k[0]),
             "noise_variance": (("bin", "channel"), np.ones(shape)),
-            "signal_response": (("bin", "channel"), response[0] * gain(grid.centre_mhz, config.receiver)),
+            "signal_response": (("bin", "channel"), response[0] * factor),
             "flag": (("bin", "channel"), np.broadcast_to(grid.masked.astype(np.uint8), shape) | empty),
             "weight_s": ("bin", weight_s),
         }

@@ -1,8 +1,9 @@
 """The posterior of one mock in milliseconds: importance sampling from a bank of prior draws, refined where it is thin.
 
 The bank is drawn once, its spectra are written in the few directions that troughs have, and each mock
-costs one product of a matrix and a vector. Where too few draws carry the weight, proposals are drawn
-around those that do (population Monte Carlo: Cappé et al. 2004, J. Comput. Graph. Stat. 13, 907), from the
+costs one product of a matrix and a vector. Where too few draws carry the weight, proposals are drawn first
+around all local maxima (`reduce.local_maxima`; a bank alone misses a narrow one), then around the draws that
+carry it (population Monte Carlo: Cappé et al. 2004, J. Comput. Graph. Stat. 13, 907), always from the
 whole mixture of a round and the prior together, so that the weights stay bounded (Owen and Zhou 2000,
 J. Am. Stat. Assoc. 95, 135). `reduce.fast_posterior` moves draws instead; the two check each other.
 """
@@ -16,6 +17,7 @@ from numpy.typing import NDArray
 from scipy.special import gammaln, logsumexp
 
 from reduce.combine import Information
+from reduce.local_maxima import Maxima, local_maxima
 from reduce.trough_model import TroughModel
 
 FloatArray = NDArray[np.float64]
@@ -28,6 +30,11 @@ CENTRES = 60
 PROPOSALS = 3000
 FREEDOM = 5.0  # of Student's t about each centre
 PRIOR_SHARE = 0.1
+FLATTENED = 100.0  # effective draws among which centres and starts are chosen
+STARTS = 32
+WIDENED = 1.2  # of a maximum's curvature, whose neighbourhood is not quite Gaussian
+LEAST_SHARE = 0.05  # of the highest maximum's, for every other
+FORGOTTEN = 15.0  # ln L below the highest maximum
 
 
 @dataclass(frozen=True, eq=False)
@@ -126,8 +133,13 @@ def quick_posterior(
     value = _likelihood_of_bank(information, bank)
     rounds = [_Round(bank.parameters, value - np.log(len(value)))]
     while len(rounds) <= ROUNDS and sum(each.effective for each in rounds) < ENOUGH:
-        parameters, log_weight = _refined(information, shape, bank.log_density, rounds[-1], rng)
-        rounds.append(_Round(parameters, log_weight))
+        flat = _flattened(rounds[-1].log_weight)
+        if len(rounds) == 1:
+            starts = bank.parameters[rng.choice(len(flat), STARTS, p=flat)]
+            mixture = _around_maxima(local_maxima(information, shape, starts))
+        else:
+            mixture = _around_draws(rounds[-1].parameters, flat, shape, rng)
+        rounds.append(_proposed(information, shape, bank.log_density, mixture, rng))
     # Each round is unbiased by itself; together they count by the draws that they are worth.
     worth = np.array([each.effective for each in rounds])
     log_weight = np.concatenate(
@@ -168,61 +180,71 @@ def _effective(log_weight: FloatArray) -> float:
     return float(np.exp(2.0 * logsumexp(log_weight) - logsumexp(2.0 * log_weight)))
 
 
-def _refined(
-    information: Information,
-    shape: TroughModel,
-    log_prior: float,
-    before: _Round,
-    rng: np.random.Generator,
-) -> tuple[FloatArray, FloatArray]:
-    """A round of proposals around the draws that carry the weight.
+@dataclass(frozen=True, eq=False)
+class _Mixture:
+    """Student's t about centres ndarray[centre, parameter]: roots of their covariances, and their shares."""
 
-    Weights are flattened first until a tenth as many draws as are wanted carry them, so that one
-    lucky draw does not draw all proposals to itself.
-    """
-    parameters, log_weight = before.parameters, before.log_weight
-    power = _flattening(log_weight)
-    weight = np.exp(power * log_weight - logsumexp(power * log_weight))
-    count, dimension = PROPOSALS, parameters.shape[1]
+    centres: FloatArray
+    roots: FloatArray
+    share: FloatArray
+
+    def draw(self, rng: np.random.Generator, size: int) -> FloatArray:
+        which = rng.choice(len(self.share), size, p=self.share)
+        normal = rng.standard_normal((size, self.centres.shape[1]))
+        scale = np.sqrt(FREEDOM / rng.chisquare(FREEDOM, size))[:, None]
+        return np.asarray(self.centres[which] + scale * np.einsum("dij,dj->di", self.roots[which], normal))
+
+    def log_density(self, at: FloatArray) -> FloatArray:
+        """ndarray[draw]."""
+        dimension = at.shape[1]
+        constant = gammaln(0.5 * (FREEDOM + dimension)) - gammaln(0.5 * FREEDOM)
+        constant -= 0.5 * dimension * np.log(FREEDOM * np.pi)
+        each = np.empty((len(at), len(self.share)))
+        for number, (centre, root) in enumerate(zip(self.centres, self.roots, strict=True)):
+            white = np.linalg.solve(root, (at - centre).T)
+            each[:, number] = -0.5 * (FREEDOM + dimension) * np.log1p((white**2).sum(axis=0) / FREEDOM)
+            each[:, number] -= np.log(np.abs(np.diag(root))).sum()
+        return np.asarray(logsumexp(each, axis=1, b=self.share) + constant)
+
+
+def _around_maxima(maxima: Maxima) -> _Mixture:
+    """Shares by the height of the maxima, flattened, and some for each: the heights say little of the volumes."""
+    height = np.exp(0.5 * (maxima.log_likelihood - maxima.log_likelihood[0]))
+    near = maxima.log_likelihood > maxima.log_likelihood[0] - FORGOTTEN
+    share = np.where(near, height + LEAST_SHARE, 0.0)
+    roots = WIDENED * np.linalg.cholesky(maxima.covariance)
+    return _Mixture(maxima.parameters[near], roots[near], share[near] / share[near].sum())
+
+
+def _around_draws(parameters: FloatArray, weight: FloatArray, shape: TroughModel, rng: np.random.Generator) -> _Mixture:
+    """Centres among the draws, of one width: Silverman's for so many, of the flattened cloud's covariance."""
+    dimension = parameters.shape[1]
     centres = parameters[rng.choice(len(weight), CENTRES, p=weight)]
-    mean = weight @ parameters
-    off = parameters - mean
-    # Silverman's width for so many centres, of the flattened cloud's covariance.
+    off = parameters - weight @ parameters
     width = (4.0 / (CENTRES * (dimension + 2.0))) ** (1.0 / (dimension + 4.0))
-    spread = (off * weight[:, None]).T @ off
     floor = 1e-12 * np.diag(shape.upper - shape.lower) ** 2
-    root = np.linalg.cholesky(width**2 * spread + floor)
-    from_prior = shape.draw_prior(rng, int(PRIOR_SHARE * count))
-    normal = rng.standard_normal((count - len(from_prior), dimension))
-    scale = np.sqrt(FREEDOM / rng.chisquare(FREEDOM, len(normal)))[:, None]
-    proposed = centres[rng.integers(CENTRES, size=len(normal))] + scale * normal @ root.T
-    proposed = np.concatenate([proposed, from_prior])
-    allowed = shape.allowed(proposed)
-    proposed = proposed[allowed]
-    log_mixture = _log_mixture(proposed, centres, root)
-    share = np.log(PRIOR_SHARE), np.log1p(-PRIOR_SHARE)
-    log_proposal = np.logaddexp(share[0] + log_prior, share[1] + log_mixture)
+    root = np.linalg.cholesky(width**2 * (off * weight[:, None]).T @ off + floor)
+    return _Mixture(centres, np.broadcast_to(root, (CENTRES, *root.shape)), np.full(CENTRES, 1.0 / CENTRES))
+
+
+def _proposed(
+    information: Information, shape: TroughModel, log_prior: float, mixture: _Mixture, rng: np.random.Generator
+) -> _Round:
+    """Draws from the mixture and the prior together, weighted."""
+    from_prior = shape.draw_prior(rng, int(PRIOR_SHARE * PROPOSALS))
+    proposed = np.concatenate([mixture.draw(rng, PROPOSALS - len(from_prior)), from_prior])
+    proposed = proposed[shape.allowed(proposed)]
+    log_proposal = np.logaddexp(np.log(PRIOR_SHARE) + log_prior, np.log1p(-PRIOR_SHARE) + mixture.log_density(proposed))
     value = information.log_likelihood(shape.signal_k(proposed))
-    return proposed, value + log_prior - log_proposal - np.log(count)
+    return _Round(proposed, value + log_prior - log_proposal - np.log(PROPOSALS))
 
 
-def _flattening(log_weight: FloatArray) -> float:
-    """Power of the weights at which a tenth of the draws wanted carry them."""
+def _flattened(log_weight: FloatArray) -> FloatArray:
+    """Weights to a power at which some hundred draws carry them, so that one lucky draw does not draw all to itself."""
     low, high = 0.0, 1.0
-    if _effective(log_weight) >= 0.1 * ENOUGH:
-        return 1.0
-    for _ in range(30):
-        middle = 0.5 * (low + high)
-        low, high = (middle, high) if _effective(middle * log_weight) >= 0.1 * ENOUGH else (low, middle)
-    return low
-
-
-def _log_mixture(at: FloatArray, centres: FloatArray, root: FloatArray) -> FloatArray:
-    """ln density ndarray[draw] of Student's t of one width about each centre, averaged."""
-    dimension = at.shape[1]
-    inverse = np.linalg.inv(root)
-    white, whites = at @ inverse.T, centres @ inverse.T
-    distance = (white**2).sum(axis=1)[:, None] + (whites**2).sum(axis=1) - 2.0 * white @ whites.T
-    each = -0.5 * (FREEDOM + dimension) * np.log1p(np.maximum(distance, 0.0) / FREEDOM)
-    constant = gammaln(0.5 * (FREEDOM + dimension)) - gammaln(0.5 * FREEDOM) - 0.5 * dimension * np.log(FREEDOM * np.pi)
-    return np.asarray(logsumexp(each, axis=1) - np.log(len(centres)) + constant - np.log(np.abs(np.diag(root))).sum())
+    if _effective(log_weight) < FLATTENED:
+        for _ in range(30):
+            middle = 0.5 * (low + high)
+            low, high = (middle, high) if _effective(middle * log_weight) >= FLATTENED else (low, middle)
+    power = low if _effective(log_weight) < FLATTENED else 1.0
+    return np.asarray(np.exp(power * log_weight - logsumexp(power * log_weight)))

@@ -15,6 +15,7 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from sims.campaign import FLAG_EMPTY
+from sims.csv_table import finite_number
 from sims.errors import InputError, raise_if_any
 from sims.products import read_netcdf
 from sims.schema import SPECTRA, check, describe
@@ -23,6 +24,9 @@ FloatArray = NDArray[np.float64]
 COLUMNS = ("frequency_mhz", "temperature_k", "sigma_k", "bin", "w", "width_mhz")
 POSITIVE = ("frequency_mhz", "sigma_k", "width_mhz")
 SIGMA_AGREEMENT = 0.01
+SAME_CHANNEL = 1e-6  # of the frequency: what rounding does to a channel's frequency from bin to bin, 40 Hz at 40 MHz
+CLOSEST = 0.1  # of the spacing within a bin: frequencies of two bins nearer than that are hardly two channels
+FIRST_TOLD = 5
 
 
 def read_spectra(path: Path, covariance: Path | None = None) -> xr.Dataset:
@@ -33,7 +37,8 @@ def read_spectra(path: Path, covariance: Path | None = None) -> xr.Dataset:
     path : Path
         ``.nc``: a Dataset that keeps to the `spectra` product. ``.csv``: columns frequency_mhz,
         temperature_k, sigma_k, and optionally bin (a label), w (the signal response,
-        taken as 1 where absent) and width_mhz; one row a channel of a bin.
+        taken as 1 where absent) and width_mhz; one row a channel of a bin. Frequencies that differ by less
+        than a millionth are those of one channel, and take the lowest of them.
     covariance : Path, optional
         CSV without header: the covariance in K^2 of all rows of the CSV table, in their
         order. It takes the place of sigma_k.
@@ -96,6 +101,7 @@ def _first(where: NDArray[np.bool_]) -> str:
 class _Table:
     columns: dict[str, FloatArray]
     labels: list[str]
+    lines: list[int]
 
 
 def _read_table(path: Path) -> _Table:
@@ -115,49 +121,69 @@ def _read_table(path: Path) -> _Table:
     raise_if_any(problems)
     values: dict[str, list[float]] = {name: [] for name in header if name != "bin"}
     labels = []
-    for number, row in rows[1:]:
-        if len(row) != len(header):
-            problems.append(f"{path}: line {number} has {len(row)} cells, the header {len(header)}")
-            continue
+    whole = [(number, row) for number, row in rows[1:] if len(row) == len(header)]
+    bad_cells: dict[str, list[tuple[int, str]]] = {name: [] for name in values}
+    for number, row in whole:
         for name, cell in zip(header, row, strict=True):
             if name == "bin":
                 labels.append(cell.strip())
                 continue
-            value = _number(cell)
-            values[name].append(value)
-            if not np.isfinite(value) or (name in POSITIVE and value <= 0.0):
-                allowed = "a finite number" + " above 0" * (name in POSITIVE)
-                problems.append(f"{path}: line {number}, {name}: {cell!r} is not {allowed}")
+            value = finite_number(cell)
+            if value is None or (name in POSITIVE and value <= 0.0):
+                bad_cells[name].append((number, cell))
+            else:
+                values[name].append(value)
+    torn = [(number, len(row)) for number, row in rows[1:] if len(row) != len(header)]
+    problems += [f"{path}: {problem}" for problem in _torn_problem(torn, len(header))]
+    problems += [f"{path}: {_cell_problem(name, bad)}" for name, bad in bad_cells.items() if bad]
     if len(rows) < 2:
         problems.append(f"{path}: holds a header but no rows")
     raise_if_any(problems)
-    return _Table({name: np.array(column) for name, column in values.items()}, labels or ["all"] * (len(rows) - 1))
+    columns = {name: np.array(column) for name, column in values.items()}
+    return _Table(columns, labels or ["all"] * len(whole), [number for number, _ in whole])
 
 
-def _number(cell: str) -> float:
-    """Number in a cell; NaN where it is none, and for 1_0, which Python takes for ten but is a slip in a table."""
-    try:
-        return float("nan") if "_" in cell else float(cell)
-    except ValueError:
-        return float("nan")
+def _torn_problem(torn: list[tuple[int, int]], cells: int) -> list[str]:
+    """Lines of another number of cells than the header has, in one line if there are any."""
+    if len(torn) < 2:
+        return [f"line {line} has {got} cells, the header {cells}" for line, got in torn]
+    told = _some([f"line {line} has {got}" for line, got in torn], torn[-1][0])
+    return [f"{len(torn)} lines do not have the {cells} cells of the header: {told}"]
+
+
+def _cell_problem(name: str, bad: list[tuple[int, str]]) -> str:
+    """The bad cells of a column in one line."""
+    allowed = "a finite number" + " above 0" * (name in POSITIVE)
+    if len(bad) == 1:
+        return f"line {bad[0][0]}, {name}: {bad[0][1]!r} is not {allowed}"
+    told = _some([f"line {line} {cell!r}" for line, cell in bad], bad[-1][0])
+    return f"{name}: {len(bad)} cells are not {allowed}: {told}"
+
+
+def _some(offenders: list[str], last_line: int) -> str:
+    """The first offenders, and how many follow down to which line."""
+    more = len(offenders) - FIRST_TOLD
+    return ", ".join(offenders[:FIRST_TOLD]) + (f" and {more} more up to line {last_line}" if more > 0 else "")
 
 
 def _from_table(table: _Table, path: Path, covariance: Path | None) -> xr.Dataset:
     columns = table.columns
     if "sigma_k" not in columns and covariance is None:
         raise InputError(f"{path}: column 'sigma_k' is missing, and no covariance file is given in its place")
-    frequency = np.unique(columns["frequency_mhz"])
+    frequency, row_channel = _channels(columns["frequency_mhz"])
     if len(frequency) < 2:
         raise InputError(f"{path}: holds fewer than two frequencies")
     names = list(dict.fromkeys(table.labels))
     row_bin = np.array([names.index(label) for label in table.labels])
-    row_channel = np.searchsorted(frequency, columns["frequency_mhz"])
     cell = row_bin * len(frequency) + row_channel
     if len(np.unique(cell)) < len(cell):
         twice = int(np.argmax(np.bincount(cell) > 1))
         where = f"{frequency[twice % len(frequency)]} MHz of bin {names[twice // len(frequency)]!r}"
-        raise InputError(f"{path}: {where} stands more than once")
-    raise_if_any([f"{path}: {problem}" for problem in _order_problems(columns, row_bin, row_channel, names)])
+        lines = [table.lines[row] for row in np.flatnonzero(cell == twice)]
+        raise InputError(f"{path}: {where} stands more than once, on lines {' and '.join(map(str, lines[:2]))}")
+    problems = _order_problems(columns, row_bin, row_channel, names)
+    problems += _spacing_problems(frequency, row_bin, row_channel, table.lines)
+    raise_if_any([f"{path}: {problem}" for problem in problems])
     variance, modes = _noise(columns, path, covariance)
     shape = (len(names), len(frequency))
 
@@ -184,6 +210,35 @@ def _from_table(table: _Table, path: Path, covariance: Path | None) -> xr.Datase
     if modes is not None:
         spectra["systematic_modes"] = (("mode", "bin", "channel"), spread(modes, 0.0))
     return describe(spectra, SPECTRA)
+
+
+def _channels(row_mhz: FloatArray) -> tuple[FloatArray, NDArray[np.int64]]:
+    """Frequencies of the channels, MHz, and the channel of each row; rounding makes no channel of its own."""
+    distinct = np.unique(row_mhz)
+    begins = np.diff(distinct, prepend=-np.inf) > SAME_CHANNEL * distinct
+    channel = np.cumsum(begins) - 1
+    return distinct[begins], channel[np.searchsorted(distinct, row_mhz)]
+
+
+def _spacing_problems(
+    frequency: FloatArray, row_bin: NDArray[np.int64], row_channel: NDArray[np.int64], lines: list[int]
+) -> list[str]:
+    """Frequencies of different bins that are too close for two channels and too far apart for one."""
+    within = [np.diff(np.sort(frequency[row_channel[row_bin == number]])) for number in range(row_bin.max() + 1)]
+    spacing = float(np.min(np.concatenate(within), initial=np.inf))
+    close = np.flatnonzero(np.diff(frequency) < CLOSEST * spacing) if np.isfinite(spacing) else np.array([], int)
+    if not len(close):
+        return []
+
+    def place(channel: int) -> str:
+        return f"{frequency[channel]} MHz (line {lines[int(np.argmax(row_channel == channel))]})"
+
+    pairs = [f"{place(channel)} and {place(channel + 1)}" for channel in close]
+    more = f" and {len(pairs) - FIRST_TOLD} more" if len(pairs) > FIRST_TOLD else ""
+    return [
+        f"frequencies of different bins lie within a tenth of the spacing of a bin's own, {spacing:g} MHz, "
+        f"and are not the same: {', '.join(pairs[:FIRST_TOLD])}{more}; give one channel one frequency"
+    ]
 
 
 def _order_problems(

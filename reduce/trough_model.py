@@ -9,15 +9,17 @@ before reionisation; E, its end. B, C and D are free, A and E are held. `turning
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import ClassVar
 
 import numpy as np
 from numpy.typing import NDArray
 
-from reduce.combine import Information
+from reduce.signal_shape import POINTS, UniformShape, channel_means, quadrature_mhz
 from sims.config import TurningPoints
 from sims.errors import InputError
-from sims.hydrogen import coldest_brightness_k
 from sims.trough import turning_point_batch_k
+
+__all__ = ["NAMES", "POINTS", "TroughModel", "trough_model"]
 
 FloatArray = NDArray[np.float64]
 
@@ -29,12 +31,11 @@ NAMES = (
     "temperature_c_mk",
     "temperature_d_mk",
 )
-POINTS = ("B", "C", "D")
-PRIOR_TRIES = 1000
+UNITS = ("MHz", "MHz", "MHz", "mK", "mK", "mK")
 
 
 @dataclass(frozen=True)
-class TroughModel:
+class TroughModel(UniformShape):
     """Cubic trough through A to E with zero slope at each, free at B, C and D.
 
     Attributes
@@ -53,6 +54,19 @@ class TroughModel:
     held_mk: FloatArray
     points_mhz: FloatArray
 
+    title: ClassVar[str] = "turning_points"
+    rule: ClassVar[str] = "have b < c < d in frequency and c lowest in temperature"
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Of the parameters."""
+        return NAMES
+
+    @property
+    def units(self) -> tuple[str, ...]:
+        """Of the parameters."""
+        return UNITS
+
     def signal_k(self, parameters: FloatArray) -> FloatArray:
         """Channel means of the trough.
 
@@ -70,8 +84,7 @@ class TroughModel:
         frequency = _with_ends(self.held_mhz, free_mhz)
         temperature = _with_ends(self.held_mk, free_mk)
         trough = turning_point_batch_k(self.points_mhz.ravel(), frequency, temperature / 1e3)
-        pairs = trough.reshape(*parameters.shape[:-1], *self.points_mhz.shape)
-        return 0.5 * (pairs[..., 0] + pairs[..., 1])
+        return channel_means(trough)
 
     def allowed(self, parameters: FloatArray) -> NDArray[np.bool_]:
         """Where the prior is not zero: inside the bounds, rising in frequency, C the lowest of the three."""
@@ -81,38 +94,9 @@ class TroughModel:
         rising &= (f[..., 0] > self.held_mhz[0]) & (f[..., 2] < self.held_mhz[1])
         return np.asarray(inside & rising & (t[..., 1] < t[..., 0]) & (t[..., 1] < t[..., 2]))
 
-    def draw_prior(self, rng: np.random.Generator, size: int) -> FloatArray:
-        """Independent draws ndarray[size, 6] from the prior.
-
-        Raises
-        ------
-        InputError
-            If the bounds leave next to nothing that is allowed.
-        """
-        kept: list[FloatArray] = []
-        found = 0
-        for _ in range(PRIOR_TRIES):
-            tries = rng.uniform(self.lower, self.upper, (size, len(NAMES)))
-            kept.append(tries[self.allowed(tries)])
-            found += len(kept[-1])
-            if found >= size:
-                return np.concatenate(kept)[:size]
-        raise InputError(
-            f"turning_points: only {found} of {PRIOR_TRIES * size} draws within the bounds have b < c < d in frequency "
-            "and c lowest in temperature; widen the bounds"
-        )
-
-    def log_probability(self, parameters: FloatArray, information: Information) -> FloatArray:
-        """Log posterior ndarray[...] up to a constant: the likelihood where the prior allows, else -inf."""
-        result = np.full(parameters.shape[:-1], -np.inf)
-        allowed = self.allowed(parameters)
-        if allowed.any():
-            result[allowed] = information.log_likelihood(self.signal_k(parameters[allowed]))
-        return result
-
-    def colder_than_gas(self, parameters: FloatArray) -> NDArray[np.bool_]:
-        """Which of B, C, D lie below the coldest that gas can be there: ndarray[..., 3]."""
-        return np.asarray(parameters[..., 3:] / 1e3 < coldest_brightness_k(parameters[..., :3]))
+    def turning_points(self, parameters: FloatArray) -> FloatArray:
+        """Frequency, MHz, and temperature, mK, of B, C and D: ndarray[..., 3, 2]."""
+        return np.stack([parameters[..., :3], parameters[..., 3:]], axis=-1)
 
 
 def trough_model(settings: TurningPoints, frequency_mhz: FloatArray, width_mhz: FloatArray) -> TroughModel:
@@ -148,7 +132,7 @@ def trough_model(settings: TurningPoints, frequency_mhz: FloatArray, width_mhz: 
         upper=bounds[:, 1],
         held_mhz=np.array([a.frequency_mhz, e.frequency_mhz]),
         held_mk=np.array([a.temperature_mk, e.temperature_mk]),
-        points_mhz=frequency_mhz[:, None] + width_mhz[:, None] / np.sqrt(12.0) * np.array([-1.0, 1.0]),
+        points_mhz=quadrature_mhz(frequency_mhz, width_mhz),
     )
 
 

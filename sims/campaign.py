@@ -232,7 +232,7 @@ def _recording(
     antenna_k = average.antenna_temperature_k + average.signal_response * signal_k
     true_variance = noise_variance_k2(antenna_k, true.receiver.temperature_k, width, on_antenna_s)
     noise = np.sqrt(true_variance) * stream(config.run.seed, "radiometer-noise").standard_normal(antenna_k.shape)
-    measured_k = received_k(antenna_k + noise, centre, true.receiver)
+    measured_k = received_k(antenna_k + noise, centre, width, true.receiver)
     kept = [name for name in RECORDING if name in geometry]
     recording = geometry[kept].assign(
         frequency_mhz=("channel", centre),
@@ -242,7 +242,7 @@ def _recording(
             ("time", "channel"),
             noise_variance_k2(measured_k, config.receiver.temperature_k, width, on_antenna_s),
         ),
-        signal_response=(("time", "channel"), believed * gain(centre, config.receiver)),
+        signal_response=(("time", "channel"), believed * gain(centre, width, config.receiver)),
         flag=(("time", "channel"), np.broadcast_to(grid.masked * np.uint8(FLAG_MASKED), antenna_k.shape)),
     )
     recording.attrs = {**geometry.attrs, "sky": config.sky.kind, "engine": json.dumps(vars(average.reached))}

@@ -24,6 +24,7 @@ from sims.config_forward import (
     TableSignal,
     TurningPointSignal,
 )
+from sims.config_idle import knowledge_and_effect, masks_and_band, trough_and_band, turning_points_and_band
 from sims.config_reduction import Foreground, Limits, PointPrior, TurningPoints
 from sims.config_sky import HealpixSky, ImageSky, InventedSky, Sky
 from sims.config_vantage import (
@@ -306,4 +307,8 @@ _JUDGES: tuple[tuple[tuple[str, ...], Callable[..., list[str]]], ...] = (
     (("channels", "correction"), _channels_and_correction),
     (("run", "correction"), _run_and_correction),
     (("beam",), _plane_below_wire),
+    (("channels",), masks_and_band),
+    (("channels", "signal"), trough_and_band),
+    (("channels", "turning_points"), turning_points_and_band),
+    (("run", "sky", "beam", "surface", "receiver", "knowledge"), knowledge_and_effect),
 )

@@ -13,7 +13,6 @@ from pydantic import BaseModel
 
 from sims.quantities import InUnit, plain_name
 
-
 TAGS = ("kind", "format")  # keys that tell the members of a union apart
 
 

@@ -6,8 +6,11 @@ import re
 from collections.abc import Sequence
 from pathlib import Path
 
+import pytest
+
 from sims.config import Config
 from sims.config_load import load_config
+from sims.errors import InputError
 
 DEMO = (Path(__file__).parents[1] / "configs" / "demo.toml").read_text(encoding="utf-8")
 
@@ -52,3 +55,19 @@ def load_text(text: str, folder: Path) -> Config:
     path = folder / "campaign.toml"
     path.write_text(text, encoding="utf-8")
     return load_config(path)
+
+
+def problems_of(text: str, folder: Path) -> tuple[str, ...]:
+    """What is told of a text that must be refused, without the name of its file."""
+    with pytest.raises(InputError) as caught:
+        load_text(text, folder)
+    prefix = f"{folder / 'campaign.toml'}: "
+    assert all(problem.startswith(prefix) for problem in caught.value.problems)
+    return tuple(problem.removeprefix(prefix) for problem in caught.value.problems)
+
+
+def only_problem(text: str, folder: Path) -> str:
+    """The one problem of a text."""
+    problems = problems_of(text, folder)
+    assert len(problems) == 1, problems
+    return problems[0]

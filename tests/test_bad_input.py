@@ -104,6 +104,12 @@ CASES: dict[str, tuple[list[Change], list[str]]] = {
     "band reversed": ([('stop = "120 MHz"', 'stop = "30 MHz"')], ["channels: stop (30.0 MHz) must lie above start (40.0 MHz)"]),
     "mask falling": ([('"87.5 MHz", "88.5 MHz"', '"88.5 MHz", "87.5 MHz"')], ["channels: masks must rise", "88.5, 87.5"]),
     "mask over everything": ([('"87.5 MHz", "88.5 MHz"', '"30 MHz", "130 MHz"')], ["foreground.terms:", "the 0 that"]),
+    "mask outside the band": ([('"87.5 MHz", "88.5 MHz"', '"121 MHz", "122 MHz"')], ["channels.masks.0, 121 to 122 MHz"]),
+    "trough outside the band": ([('stop = "120 MHz"', 'stop = "70 MHz"'), ('["87.5 MHz", "88.5 MHz"]', "")], ["signal.c, 71 MHz"]),
+    "turning point outside the band": (
+        [('["55 MHz", "95 MHz"]', '["25 MHz", "39 MHz"]'), ('["40 MHz", "58 MHz"]', '["20 MHz", "30 MHz"]')],
+        ["turning_points.c.frequency, 25 to 39 MHz"],
+    ),
     "bins and directions": ([('by = "pointing"\ncount = 8', 'by = "pointing"\ncount = 9')], ["bins.count must be 8", "got 9"]),
     "bins and vantage": ([('by = "pointing"', 'by = "sidereal-time"')], ['bins.by = "sidereal-time" needs vantage.kind']),
     "turning points inside the band": (
@@ -155,6 +161,10 @@ KNOWLEDGE_CASES = {
     "group of strangers": (
         f'{KNOWN_SCALE}\n[[knowledge.correlated]]\npaths = ["sky.scale", "sky.index"]\ncorrelation = [[1, 0], [0, 1]]',
         "correlated path 'sky.index' has no entry of its own",
+    ),
+    "period of no ripple": (
+        'receiver.ripple_period = { distribution = "normal", sd = "1 MHz" }',
+        "knowledge.receiver.ripple_period_mhz: moves nothing with receiver.ripple_fraction = 0",
     ),
     "field": ('[knowledge.index_field]\nsd = 0.05\ncorrelation_length = "20 K"', "correlation_length: wrong unit (K)"),
 }  # fmt: skip
@@ -283,6 +293,12 @@ SPECTRA_CASES: dict[str, tuple[Callable[[str], str], str]] = {
     "NaN sigma": (lambda t: t.replace("0.01\n", "nan\n", 1), "line 2, sigma_k: 'nan' is not a finite number above 0"),
     "negative sigma": (lambda t: t.replace("0.01\n", "-0.01\n", 1), "line 2, sigma_k: '-0.01' is not a finite number above"),
     "NaN temperature": (lambda t: t.replace("6957.3098", "nan"), "line 2, temperature_k: 'nan' is not a finite number"),
+    "column of words": (
+        lambda t: t.replace(",0.01\n", ",x\n"), "sigma_k: 20 cells are not a finite number above 0: line 2 'x', line 3 'x'",
+    ),
+    "twice but for rounding": (
+        lambda t: t.replace("\n60,", "\n58.0000001,"), "58.0 MHz of bin 'all' stands more than once, on lines 6 and 7",
+    ),
     "short row": (lambda t: t.replace(",0.01\n", "\n", 1), "line 2 has 2 cells, the header 3"),
     "empty": (lambda t: "", "holds no header line"),
     "outside the turning points": (lambda t: t.replace("\n50,", "\n10,"), "do not enclose the channels"),

@@ -133,7 +133,8 @@ def test_recording_holds_no_truth_and_the_nominal_response() -> None:
     assert 0.0 < np.abs(believed - true).max() < 0.02
     # What is believed is the nominal response and gain to rounding, whatever is true.
     nominal = observe(config.model_copy(update={"run": config.run.model_copy(update={"truth": "nominal"})}), quiet)
-    expected = nominal.truth["signal_response"].values * gain(nominal.truth["frequency_mhz"].values, config.receiver)
+    channels = (nominal.truth["frequency_mhz"].values, nominal.truth["width_mhz"].values)
+    expected = nominal.truth["signal_response"].values * gain(*channels, config.receiver)
     assert observed.recording["signal_response"].values == pytest.approx(expected, abs=1e-8)
 
 

@@ -16,7 +16,7 @@ from reduce import pipeline, preview, starter
 from reduce.cli import EXIT_FAILED, EXIT_INPUT, app
 from sims.config_load import load_config
 
-COMMANDS = ("run", "fit", "check", "compare", "new", "timeline", "sky", "beam")
+COMMANDS = ("run", "fit", "check", "compare", "new", "timeline", "sky", "beam", "trust")
 
 
 def call(*words: str | Path) -> Any:
@@ -44,6 +44,7 @@ def test_help_says_what_each_command_does_and_where_to_begin() -> None:
         ("run", ["CONFIG", "--out", "--update", "spectra.nc", "turning_points.json", "refused without --update"]),
         ("fit", ["SPECTRA", "CONFIG", "--out", "--covariance", "frequency_mhz, temperature_k, sigma_k", "K^2"]),
         ("check", ["CONFIG", "geometry", "noise", "time and memory", "Writes nothing"]),
+        ("trust", ["CONFIG", "--out", "--mocks", "default: 200", "--outside", "--processes", "trust.nc"]),
         ("new", ["DIR", "starter configuration", "campaign.toml"]),
     ],
 )
@@ -111,6 +112,41 @@ def test_a_mistake_of_ours_is_not_hidden(monkeypatch: pytest.MonkeyPatch, tmp_pa
     result = call("check", tmp_path / "a.toml")
     assert result.exit_code == EXIT_FAILED
     assert isinstance(result.exception, ZeroDivisionError)
+
+
+# ---------------------------------------------------------------- trust
+
+
+def test_trust_tells_all_problems_at_once_and_computes_nothing(tmp_path: Path) -> None:
+    path, out = tmp_path / "campaign.toml", tmp_path / "out"
+    path.write_text(demo_with(("nside = 64", "nside = 63")), encoding="utf-8")
+    out.mkdir()
+    (out / "trust.txt").write_text("mine")
+    outside = [tmp_path / "a" / "sky.toml", tmp_path / "b" / "sky.toml"]
+    for each in outside:
+        each.parent.mkdir()
+        each.write_text(DEMO, encoding="utf-8")
+    words = ["--mocks", "3", "--processes", "0", "--outside", outside[0], "--outside", outside[1]]
+    result = call("trust", path, "--out", out, *words, "--outside", tmp_path / "none.toml")
+    assert result.exit_code == EXIT_INPUT
+    assert result.output.startswith("quietlimb: 6 problems\n")
+    for part in (
+        "sky.nside: should be",
+        "none.toml",
+        "--mocks: got 3; allowed are at least 10",
+        "--processes: got 0; allowed are at least 1",
+        "--outside: two worlds would be named sky",
+        "already holds trust.txt; name another folder, or give --update",
+    ):
+        assert part in result.output
+    assert [file.name for file in out.iterdir()] == ["trust.txt"]
+    assert (out / "trust.txt").read_text() == "mine"
+
+
+def test_trust_needs_a_folder(tmp_path: Path) -> None:
+    result = call("trust", tmp_path / "a.toml")
+    assert result.exit_code == EXIT_INPUT
+    assert "Usage:" in result.output
 
 
 # ---------------------------------------------------------------- new

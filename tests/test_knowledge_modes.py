@@ -106,6 +106,7 @@ def test_a_scale_is_the_temperature_itself(case: Case) -> None:
 def test_a_ripple_is_the_temperature_times_its_cosine(case: Case) -> None:
     temperature, response = case.mode("receiver.ripple_fraction")
     cosine = np.cos(2 * np.pi * case.grid.centre_mhz / 35.0 + np.radians(40.0))
+    cosine *= np.sinc(case.grid.width_mhz / 35.0)  # its mean over the channel
     # Rounding of 1e4 K, 1e-12 K, in modes of 0.1 K.
     np.testing.assert_allclose(temperature, 2e-5 * case.temperature_k * cosine, atol=1e-10)
     np.testing.assert_allclose(response, 2e-5 * case.response * cosine, atol=1e-14)
@@ -220,7 +221,8 @@ def test_gain_is_part_of_the_response(tmp_path: Path) -> None:
     config = config.model_copy(update={"receiver": config.receiver.model_copy(update={"ripple_fraction": 0.2})})
     case = Case(config)
     _, response = case.mode("receiver.scale")
-    np.testing.assert_allclose(response, 0.01 * case.response * gain(case.grid.centre_mhz, config.receiver), rtol=1e-12)
+    factor = gain(case.grid.centre_mhz, case.grid.width_mhz, config.receiver)
+    np.testing.assert_allclose(response, 0.01 * case.response * factor, rtol=1e-12)
 
 
 def test_receiver_errors_act_on_the_spectra_themselves_without_their_noise(tmp_path: Path) -> None:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 import pytest
 from scipy import stats
@@ -10,19 +12,20 @@ from sims.config import Receiver
 from sims.receiver import gain, noise_variance_k2, received_k
 
 FREQUENCY_MHZ = np.linspace(40.0, 120.0, 3201)
+POINT = 0.0  # a channel without width: the value at its centre
 
 
 def test_an_ideal_receiver_changes_nothing() -> None:
     ideal = Receiver(temperature_k=150.0)
     antenna = 3000.0 * (FREQUENCY_MHZ / 70.0) ** -2.5
-    np.testing.assert_array_equal(gain(FREQUENCY_MHZ, ideal), 1.0)
-    np.testing.assert_array_equal(received_k(antenna, FREQUENCY_MHZ, ideal), antenna)
+    np.testing.assert_array_equal(gain(FREQUENCY_MHZ, 0.025, ideal), 1.0)
+    np.testing.assert_array_equal(received_k(antenna, FREQUENCY_MHZ, 0.025, ideal), antenna)
 
 
 def test_scale_and_offset_act_in_that_order() -> None:
     settings = Receiver(temperature_k=150.0, scale=1.02, offset_k=-3.0)
     # Written as the closed form; a product and a sum round twice.
-    np.testing.assert_allclose(received_k(np.array([100.0]), np.array([70.0]), settings), [99.0], rtol=1e-15)
+    np.testing.assert_allclose(received_k(np.array([100.0]), np.array([70.0]), 1.0, settings), [99.0], rtol=1e-15)
 
 
 def test_ripple_has_its_amplitude_period_and_phase() -> None:
@@ -30,7 +33,7 @@ def test_ripple_has_its_amplitude_period_and_phase() -> None:
     settings = Receiver(
         temperature_k=150.0, ripple_fraction=amplitude, ripple_period_mhz=period_mhz, ripple_phase_deg=phase_deg
     )
-    ripple = gain(FREQUENCY_MHZ, settings) - 1.0
+    ripple = gain(FREQUENCY_MHZ, POINT, settings) - 1.0
     # 80 MHz hold five whole periods, so their Fourier sum is exact but for the rounding of 1 + 2e-3.
     turns = FREQUENCY_MHZ[:-1] / period_mhz
     found = 2.0 * np.mean(ripple[:-1] * np.exp(-2j * np.pi * turns))
@@ -40,13 +43,59 @@ def test_ripple_has_its_amplitude_period_and_phase() -> None:
     np.testing.assert_allclose(ripple, amplitude * np.cos(2 * np.pi * FREQUENCY_MHZ / period_mhz + np.radians(40)),
                                atol=1e-15)  # fmt: skip
     at_peak_mhz = period_mhz * (5.0 - phase_deg / 360.0)
-    assert gain(np.array([at_peak_mhz]), settings)[0] == pytest.approx(1.0 + amplitude, rel=1e-14)
+    assert gain(np.array([at_peak_mhz]), POINT, settings)[0] == pytest.approx(1.0 + amplitude, rel=1e-14)
 
 
 def test_ripple_multiplies_the_scale() -> None:
     settings = Receiver(temperature_k=0.0, scale=2.0, ripple_fraction=0.1, ripple_period_mhz=10.0)
     # cos is 1 at a multiple of the period: rounding only.
-    assert gain(np.array([70.0]), settings)[0] == pytest.approx(2.2, rel=1e-14)
+    assert gain(np.array([70.0]), POINT, settings)[0] == pytest.approx(2.2, rel=1e-14)
+
+
+RIPPLED = Receiver(temperature_k=150.0, scale=0.98, ripple_fraction=5e-3, ripple_period_mhz=10.0, ripple_phase_deg=40.0)
+
+
+def channel_means(function: Callable[[np.ndarray], np.ndarray], centre: np.ndarray, width: np.ndarray) -> np.ndarray:
+    """Means over channels by Gauss-Legendre quadrature."""
+    x, weight = np.polynomial.legendre.leggauss(12)
+    return np.asarray(function(centre[:, None] + 0.5 * width[:, None] * x) @ (weight / 2.0))
+
+
+@pytest.mark.parametrize("channels", [16, 64, 256])
+def test_a_channel_has_the_mean_of_the_ripple_over_its_width(channels: int) -> None:
+    edges = np.linspace(40.0, 120.0, channels + 1)
+    centre, width = 0.5 * (edges[1:] + edges[:-1]), np.diff(edges)
+    by_quadrature = channel_means(lambda f: gain(f, POINT, RIPPLED), centre, width)
+    # Twelve points leave nothing of a cosine over half a period; rounding of a gain near 1.
+    np.testing.assert_allclose(gain(centre, width, RIPPLED), by_quadrature, atol=1e-14)
+
+
+def test_ripple_in_wide_channels_by_numbers() -> None:
+    """A ripple of 5 K and 10 MHz: channels of 1.25 MHz flatten it to sin(pi/8) / (pi/8) = 0.97450."""
+    settings = Receiver(temperature_k=0.0, ripple_fraction=5e-3, ripple_period_mhz=10.0)
+    peak = received_k(np.array([1000.0]), np.array([70.0]), np.array([1.25]), settings)
+    assert peak[0] - 1000.0 == pytest.approx(5.0 * 0.97450, abs=5e-5)  # five digits are written
+
+
+def test_a_slope_within_a_channel_leaves_a_second_order_in_its_width() -> None:
+    """Mean of a product less product of means: g' T' width^2 / 12, which is what `received_k` leaves out."""
+
+    def sky(f: np.ndarray) -> np.ndarray:
+        return np.asarray(3000.0 * (f / 70.0) ** -2.5)
+
+    found = {}
+    for channels in (128, 256):
+        edges = np.linspace(40.0, 120.0, channels + 1)
+        centre, width = 0.5 * (edges[1:] + edges[:-1]), np.diff(edges)
+        whole = channel_means(lambda f: gain(f, POINT, RIPPLED) * sky(f), centre, width)
+        left = whole - received_k(channel_means(sky, centre, width), centre, width, RIPPLED)
+        turn = 2.0 * np.pi / 10.0
+        slope = -0.98 * 5e-3 * turn * np.sin(turn * centre + np.radians(40.0))
+        predicted = slope * -2.5 * sky(centre) / centre * width**2 / 12.0
+        # The next order is smaller by (turn width)^2 / 10, 1.5 % of the peak for 0.625 MHz; the sky's add as much.
+        np.testing.assert_allclose(left, predicted, atol=0.03 * np.abs(predicted).max())
+        found[channels] = np.abs(left).max()
+    assert found[128] / found[256] == pytest.approx(4.0, rel=0.05)  # second order, up to where the channels lie
 
 
 def test_radiometer_equation_by_numbers() -> None:

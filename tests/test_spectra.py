@@ -1,4 +1,4 @@
-"""Reading spectra that somebody measured: CSV, NetCDF, covariances, and tables that are refused."""
+"""Reading spectra that somebody measured: NetCDF, and covariances beside tables."""
 
 from __future__ import annotations
 
@@ -8,34 +8,13 @@ from pathlib import Path
 import numpy as np
 import pytest
 import xarray as xr
+from spectra_cases import FREQUENCY_MHZ, problems_of, table_text, written
 
 from reduce.spectra import diagonal_and_modes, read_spectra, spectra_problems
-from sims.errors import InputError
 from sims.products import write_product
 from sims.schema import SPECTRA, describe
 
 RNG = np.random.default_rng(17)
-FREQUENCY_MHZ = np.linspace(50.0, 100.0, 11)
-
-
-def table_text(
-    bins: tuple[str, ...] = ("north", "south"), header: str = "bin,frequency_mhz,temperature_k,sigma_k"
-) -> str:
-    rows = [f"{name},{f},{3000 * (f / 70) ** -2.5 + 7 * number:.6f},{0.01 * (number + 1)}"
-            for number, name in enumerate(bins) for f in FREQUENCY_MHZ]  # fmt: skip
-    return "\n".join([header, *rows]) + "\n"
-
-
-def written(folder: Path, text: str, name: str = "spectra.csv") -> Path:
-    path = folder / name
-    path.write_text(text, encoding="utf-8")
-    return path
-
-
-def problems_of(path: Path, covariance: Path | None = None) -> tuple[str, ...]:
-    with pytest.raises(InputError) as caught:
-        read_spectra(path, covariance)
-    return caught.value.problems
 
 
 def netcdf_spectra(bins: int = 2) -> xr.Dataset:
@@ -54,128 +33,6 @@ def netcdf_spectra(bins: int = 2) -> xr.Dataset:
         ),
         SPECTRA,
     )
-
-
-# ---------------------------------------------------------------- tables
-
-
-def test_a_table_becomes_spectra(tmp_path: Path) -> None:
-    spectra = read_spectra(written(tmp_path, table_text()))
-    assert dict(spectra.sizes) == {"channel": 11, "bin": 2}
-    np.testing.assert_array_equal(spectra["frequency_mhz"], FREQUENCY_MHZ)
-    np.testing.assert_allclose(spectra["width_mhz"], 5.0, rtol=1e-13)  # rounding of the spacing
-    expected = 3000 * (FREQUENCY_MHZ / 70) ** -2.5
-    # Six decimals are written.
-    np.testing.assert_allclose(spectra["antenna_temperature_k"], [expected, expected + 7], atol=5.1e-7)
-    np.testing.assert_allclose(spectra["noise_variance"].values[:, 0], [1e-4, 4e-4], rtol=1e-15)  # one rounding
-    np.testing.assert_array_equal(spectra["signal_response"], 1.0)
-    np.testing.assert_array_equal(spectra["flag"], 0)
-    assert spectra.attrs["bin_labels"] == ["north", "south"]
-    assert spectra.attrs["signal_response_given"] == 0
-
-
-def test_bins_may_be_interleaved_and_lack_channels(tmp_path: Path) -> None:
-    lines = table_text().splitlines()
-    north, south = lines[1:12], lines[12:]
-    mixed = [lines[0]]
-    for number in range(11):
-        mixed += [south[number]] + ([north[number]] if number != 4 else [])
-    spectra = read_spectra(written(tmp_path, "\n".join(mixed)))
-    assert spectra.attrs["bin_labels"] == ["south", "north"]
-    flag = spectra["flag"].values
-    assert flag[1, 4] != 0
-    assert np.count_nonzero(flag) == 1
-    assert np.isnan(spectra["antenna_temperature_k"].values[1, 4])
-    whole = read_spectra(written(tmp_path, table_text()))
-    np.testing.assert_array_equal(
-        spectra["antenna_temperature_k"].values[1, [0, 10]], whole["antenna_temperature_k"].values[0, [0, 10]]
-    )
-
-
-def test_columns_may_stand_in_any_order_with_comments_between(tmp_path: Path) -> None:
-    text = (
-        "\ufeff# ours\nsigma_k, temperature_k ,frequency_mhz,w,width_mhz\n0.1,10,50,0.6,2\n\n# more\n0.2,9,53,0.7,3\n"
-    )
-    spectra = read_spectra(written(tmp_path, text))
-    np.testing.assert_array_equal(spectra["signal_response"], [[0.6, 0.7]])
-    np.testing.assert_array_equal(spectra["width_mhz"], [2.0, 3.0])
-    assert spectra.attrs["signal_response_given"] == 1
-    assert spectra.attrs["bin_labels"] == ["all"]
-
-
-def edited(line: int, old: str, new: str) -> Callable[[str], str]:
-    """The table with one of its lines (1 is the header) changed."""
-
-    def edit(text: str) -> str:
-        lines = text.splitlines()
-        assert old in lines[line - 1]
-        lines[line - 1] = lines[line - 1].replace(old, new)
-        return "\n".join(lines)
-
-    return edit
-
-
-@pytest.mark.parametrize(
-    ("edit", "words"),
-    [
-        (edited(1, "temperature_k", "temp"), ("unknown column 'temp'", "frequency_mhz, temperature_k")),
-        (edited(1, ",sigma_k", ",temperature_k"), ("column 'temperature_k' stands twice",)),
-        (edited(1, "sigma_k", "w"), ("column 'sigma_k' is missing, and no covariance",)),
-        (edited(4, "60.0", "sixty"), ("line 4, frequency_mhz: 'sixty' is not a finite number above 0",)),
-        (edited(4, "60.0", "nan"), ("line 4, frequency_mhz: 'nan'",)),
-        (edited(4, "60.0", "-60.0"), ("line 4, frequency_mhz: '-60.0'", "above 0")),
-        (edited(4, "60.0", "6_0.0"), ("line 4, frequency_mhz: '6_0.0'",)),
-        (edited(5, ",0.01", ",nan"), ("line 5, sigma_k: 'nan' is not a finite number above 0",)),
-        (edited(5, ",0.01", ",-0.01"), ("line 5, sigma_k: '-0.01'",)),
-        (edited(5, ",0.01", ",0"), ("line 5, sigma_k: '0'",)),
-        (edited(5, ",0.01", ",inf"), ("line 5, sigma_k: 'inf'",)),
-        (edited(5, ",0.01", ""), ("line 5 has 3 cells, the header 4",)),
-        (edited(5, ",0.01", ",0.01,"), ("line 5 has 5 cells, the header 4",)),
-        (edited(4, "60.0", "55.0"), ("55.0 MHz of bin 'north' stands more than once",)),
-        (edited(4, "60.0", "51.0"), ("must rise; in bin 'north' 51.0 MHz follows 55.0 MHz",)),
-        (lambda text: "", ("holds no header line",)),
-        (lambda text: text.splitlines()[0], ("holds a header but no rows",)),
-        (lambda text: "\n".join(text.splitlines()[:2]), ("fewer than two frequencies",)),
-    ],
-)
-def test_bad_tables_are_refused_with_file_and_line(
-    edit: Callable[[str], str], words: tuple[str, ...], tmp_path: Path
-) -> None:
-    path = written(tmp_path, edit(table_text()))
-    problems = problems_of(path)
-    assert all(problem.startswith(str(path)) for problem in problems)
-    for word in words:
-        assert word in "\n".join(problems)
-
-
-def test_every_bad_cell_is_told(tmp_path: Path) -> None:
-    text = edited(3, "55.0", "x")(edited(5, ",0.01", ",-1")(edited(8, "80.0", "inf")(table_text())))
-    assert [problem.split("line ")[1].split(",")[0] for problem in problems_of(written(tmp_path, text))] == [
-        "3",
-        "5",
-        "8",
-    ]
-
-
-def test_one_frequency_has_one_width(tmp_path: Path) -> None:
-    text = "bin,frequency_mhz,temperature_k,sigma_k,width_mhz\na,50,10,1,2\na,53,9,1,2\nb,50,10,1,2\nb,53,9,1,3\n"
-    (problem,) = problems_of(written(tmp_path, text))
-    assert "width_mhz differs between bins at 53.0 MHz" in problem
-
-
-@pytest.mark.parametrize("w", ["-0.1", "1.6"])
-def test_a_response_is_a_fraction_of_the_sky(w: str, tmp_path: Path) -> None:
-    text = f"frequency_mhz,temperature_k,sigma_k,w\n50,10,1,0.5\n53,9,1,{w}\n"
-    (problem,) = problems_of(written(tmp_path, text))
-    assert "signal_response must lie within 0 to 1.5" in problem
-
-
-def test_files_of_another_kind_are_refused(tmp_path: Path) -> None:
-    assert "no such file" in problems_of(tmp_path / "none.nc")[0].lower()
-    assert "cannot be read as a CSV table" in problems_of(tmp_path / "none.csv")[0]
-    assert "allowed are .nc and .csv" in problems_of(written(tmp_path, table_text(), "spectra.txt"))[0]
-    (tmp_path / "binary.csv").write_bytes(b"\xff\xfe\x00,\x80")
-    assert "cannot be read as a CSV table" in problems_of(tmp_path / "binary.csv")[0]
 
 
 # ---------------------------------------------------------------- covariances

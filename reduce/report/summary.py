@@ -239,11 +239,29 @@ def _trust(products: Products) -> list[str]:
     return [
         f"depth of C below B and D over its error: {found['detection_statistic']:.2f}. What counts as a detection is "
         "read off mocks without a signal, not off a normal law: the prior alone gives a positive number.",
+        f"ln of the Bayes factor against no signal: {found['log_bayes_factor']['value']:.1f} ± "
+        f"{found['log_bayes_factor']['standard_error']:.1f}, for this shape and prior",
+        _maxima(found),
+        _forecast(found),
         f"colder than unheated gas can be, share of draws: {cold}",
         f"split R-hat up to {max(how['split_r_hat'].values()):.4f}, effective draws from "
         f"{min(how['effective_size'].values()):.0f}, acceptance {how['acceptance']:.2f}: "
         + ("converged" if how["converged"] else "NOT CONVERGED"),
     ]
+
+
+def _maxima(found: dict[str, Any]) -> str:
+    shares = [mode["share_of_draws"] for mode in found["modes"]]
+    told = ", ".join(f"{share:.0%}" for share in shares)
+    return f"maxima of the posterior: {len(shares)}, with {told} of the draws" if shares else "maxima: none found"
+
+
+def _forecast(found: dict[str, Any]) -> str:
+    sd = found["forecast"]["with_prior_sd"]
+    return (
+        f"errors forecast from the slope and the prior's width: C {sd['frequency_c_mhz']:.2f} MHz, "
+        f"{sd['temperature_c_mk']:.1f} mK"
+    )
 
 
 def _flags(products: Products) -> list[str]:
