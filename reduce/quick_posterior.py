@@ -177,7 +177,8 @@ def _likelihood_of_bank(information: Information, bank: CompressedBank) -> Float
 
 
 def _effective(log_weight: FloatArray) -> float:
-    return float(np.exp(2.0 * logsumexp(log_weight) - logsumexp(2.0 * log_weight)))
+    weight = np.exp(log_weight - log_weight.max())
+    return float(weight.sum() ** 2 / (weight @ weight))
 
 
 @dataclass(frozen=True, eq=False)
