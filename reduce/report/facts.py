@@ -16,7 +16,7 @@ from reduce.joint_fit import covariance_modes_k
 from reduce.removed import without_known
 from reduce.runner import Products
 from reduce.trough_model import NAMES, POINTS
-from sims.config import Config, FitConfig, FixedBoresight, NoSignal, ScheduledBoresight, TurningPointSignal
+from sims.config import Config, FitConfig, FixedBoresight, ScheduledBoresight, TurningPointSignal
 
 FloatArray = NDArray[np.float64]
 
@@ -90,11 +90,6 @@ def true_points(products: Products, config: FitConfig) -> dict[str, tuple[float,
         return None
     points = (config.signal.b, config.signal.c, config.signal.d)
     return {name: (point.frequency_mhz, point.temperature_mk) for name, point in zip(POINTS, points, strict=True)}
-
-
-def no_signal_put_in(products: Products, config: FitConfig) -> bool:
-    """Whether this is a mock without a signal."""
-    return "truth.nc" in products and isinstance(config, Config) and isinstance(config.signal, NoSignal)
 
 
 def beyond_foreground_k(packed: xr.Dataset, values_k: FloatArray) -> FloatArray:

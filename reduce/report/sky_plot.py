@@ -45,7 +45,6 @@ ACROSS = 900
 MERIDIANS_DEG = (-120.0, -60.0, 0.0, 60.0, 120.0)
 PARALLELS_DEG = (-60.0, -30.0, 0.0, 30.0, 60.0)
 FLAT = 1e-6
-_ELLIPSE = 2.0 * np.sqrt(2.0)
 
 
 def maps_figure(card: SkyCard, config: Config) -> Figure:
