@@ -57,14 +57,14 @@ def test_density_is_that_of_the_uniform_prior(model: TroughModel, bank: Compress
 
 
 @pytest.mark.parametrize("error_k", [0.3, 0.1, 0.05])
-def test_moments_and_evidence_against_a_million_draws_of_the_prior(
+def test_moments_and_evidence_against_many_draws_of_the_prior(
     model: TroughModel, bank: CompressedBank, error_k: float
 ) -> None:
-    """From a posterior as wide as the prior to one that a million draws still resolve."""
+    """From a posterior as wide as the prior to one that the draws still resolve."""
     rng = np.random.default_rng(3)
     known = information(model, TRUTH, error_k, rng.standard_normal(len(model.points_mhz)))
     value, kept = [], []
-    for _ in range(50):
+    for _ in range(20):
         parameters = model.draw_prior(rng, 20_000)
         value.append(known.log_likelihood(model.signal_k(parameters)))
         kept.append(parameters)
