@@ -186,7 +186,7 @@ def _caption(packed: xr.Dataset) -> str:
         "calibration and model, and what the fit leaves of the signal (coloured lines): "
         f"{surviving:.1%} of its signal-to-noise ratio before the fit."
     )
-    if "systematic_modes" in packed:
+    if packed.sizes.get("mode", 0) > int(numbers.get("foreground_known_modes", 0)):
         caption += (
             " Waves common to all bins can be errors of calibration; dotted is what the covariance allows for them."
         )
