@@ -18,7 +18,7 @@ import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
-from reduce.foreground.known import KnownForeground
+from reduce.foreground.known import SMALLEST_OF_NOISE, KnownForeground
 from reduce.redraw import Redrawer
 from sims.campaign import drawn_sky
 from sims.config import Config
@@ -32,7 +32,6 @@ from sims.sky_average import Sky
 FloatArray = NDArray[np.float64]
 
 STREAM = "ensemble"
-SMALLEST_OF_NOISE = 0.01
 AT_ONCE = 16  # skies in memory together: 16 nodes of 49,152 pixels are 6 MB a sky
 CHANNELS_AGREE = 1e-3  # of a channel
 SPARE_DRAWS = 2.0  # the covariance of fewer draws than this many times its modes is not trusted

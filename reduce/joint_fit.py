@@ -218,6 +218,8 @@ def with_whole_determinants(information: Information, fit: Subtraction, modes_k:
     The fit knows the modes only beyond the free foreground (`beyond_foreground_k`): chi-squared is the
     same, but an absolute likelihood wants the volume that they have along it too.
     """
+    if not fit.basis.shape[1]:  # beyond no free term the modes are whole
+        return information
     whole = DiagonalLowRank(fit.covariance.noise_variance_k2, modes_k[fit.good])
     nuisance = factor_basis(whole.whiten(fit.basis), "foreground basis").log_det
     return replace(information, log_det_covariance=whole.log_det, log_det_nuisance=nuisance)

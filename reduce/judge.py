@@ -15,9 +15,9 @@ from scipy.optimize import least_squares
 from scipy.stats import chi2
 
 from reduce.combine import Information
-from reduce.covariance import DiagonalLowRank, factor_basis
+from reduce.covariance import factor_basis
 from reduce.evidence import coefficient_prior, cross_validated, evidence, linear_model
-from reduce.joint_fit import JointFit, covariance_modes_k, family_from
+from reduce.joint_fit import JointFit, family_from
 from reduce.quick_posterior import CompressedBank, QuickPosterior
 from reduce.trough_model import NAMES, TroughModel
 from reduce.whiteness import Whiteness, whiteness
@@ -136,10 +136,7 @@ def judged(
     trough, beside_trough = best_trough(information, model, posterior)
     chi_squared_trough = information.chi_squared_min + beside_trough
     rows, parameters = information.rows, information.nuisance_terms + len(NAMES)
-    # The modes themselves, not their part beyond the foreground: that depends on the family, what is known does not.
-    modes_k = covariance_modes_k(fit.spectra, fit.fiducial_signal_k)
-    log_det = DiagonalLowRank.from_bins(fit.spectra["noise_variance"].values, modes_k, good).log_det
-    deviance = chi_squared_trough + log_det + rows * np.log(2.0 * np.pi)
+    deviance = chi_squared_trough + information.log_det_covariance + rows * np.log(2.0 * np.pi)
     family = family_from(settings, fit.spectra["frequency_mhz"].values)
     prior = coefficient_prior(
         family,

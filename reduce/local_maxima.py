@@ -8,12 +8,12 @@ around each, and the page of a run names them.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from reduce.combine import Information
-from reduce.trough_model import TroughModel
 
 FloatArray = NDArray[np.float64]
 
@@ -22,6 +22,28 @@ STEP = 1e-4  # of a parameter's range
 FIRST_DAMPING, EASED, RAISED = 1e-2, 0.2, 8.0
 SAME = 1.0  # standard deviations between maxima that are one
 EDGE = 1e-6  # of a range: maxima outside the bounds end this far within
+
+
+class Bounded(Protocol):
+    """What is asked of a shape: finite bounds, spectra, and where its prior is not zero."""
+
+    @property
+    def lower(self) -> FloatArray:
+        """Lower bounds ndarray[parameter]."""
+        ...
+
+    @property
+    def upper(self) -> FloatArray:
+        """Upper bounds ndarray[parameter]."""
+        ...
+
+    def signal_k(self, parameters: FloatArray) -> FloatArray:
+        """Spectra ndarray[..., channel], K."""
+        ...
+
+    def allowed(self, parameters: FloatArray) -> NDArray[np.bool_]:
+        """Where the prior is not zero: ndarray[...]."""
+        ...
 
 
 @dataclass(frozen=True, eq=False)
@@ -42,13 +64,13 @@ class Maxima:
     covariance: FloatArray
 
 
-def local_maxima(information: Information, shape: TroughModel, starts: FloatArray) -> Maxima:
+def local_maxima(information: Information, shape: Bounded, starts: FloatArray) -> Maxima:
     """Climb from each start and merge what meets.
 
     Parameters
     ----------
     information : Information
-    shape : TroughModel
+    shape : Bounded
         With a prior that is uniform within bounds.
     starts : ndarray[start, parameter]
         Where the prior is not zero.
@@ -82,11 +104,11 @@ def local_maxima(information: Information, shape: TroughModel, starts: FloatArra
     return _distinct(at, -0.5 * (misfit**2).sum(axis=1), covariance)
 
 
-def _misfit(information: Information, shape: TroughModel, at: FloatArray) -> FloatArray:
+def _misfit(information: Information, shape: Bounded, at: FloatArray) -> FloatArray:
     return np.asarray(shape.signal_k(at) @ information.R.T - information.z)
 
 
-def _linearised(information: Information, shape: TroughModel, at: FloatArray) -> tuple[FloatArray, FloatArray]:
+def _linearised(information: Information, shape: Bounded, at: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Misfit ndarray[start, direction] and its slope ndarray[start, parameter, direction], a range for a unit."""
     width = shape.upper - shape.lower
     inward = np.where(at > 0.5 * (shape.lower + shape.upper), -STEP, STEP)

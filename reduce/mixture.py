@@ -2,7 +2,8 @@
 
 Made from the annealed draws of `fast_posterior`, it proposes for the sampler of `turning_points`: independent of where
 a walker stands, so also from one maximum of a posterior to another. A sampler corrects for what it misses, so it need
-not be exact; its tails are heavy so that no place is proposed far too seldom.
+not be exact; its tails are heavy so that no place is proposed far too seldom. `quick_posterior` places the centres
+itself, without bounds.
 """
 
 from __future__ import annotations
@@ -37,6 +38,8 @@ class Mixture:
         Their inverses.
     share : ndarray[component]
         Sum to one.
+    freedom : float
+        Of Student's t.
     """
 
     lower: FloatArray
@@ -45,12 +48,13 @@ class Mixture:
     roots: FloatArray
     inverses: FloatArray
     share: FloatArray
+    freedom: float = FREEDOM
 
     def draw(self, rng: np.random.Generator | np.random.RandomState, size: int) -> FloatArray:
         """Independent draws ndarray[size, parameter], within the bounds."""
         which = rng.choice(len(self.share), size=size, p=self.share)
         normal = rng.standard_normal((size, self.centres.shape[1]))
-        scale = np.sqrt(FREEDOM / rng.chisquare(FREEDOM, size=size))[:, None]
+        scale = np.sqrt(self.freedom / rng.chisquare(self.freedom, size=size))[:, None]
         offset = np.einsum("dij,dj->di", self.roots[which], normal)
         return _squeezed(self.centres[which] + scale * offset, self.lower, self.upper)
 
@@ -63,15 +67,21 @@ class Mixture:
         """ln density ndarray[draw, component] of each component."""
         dimension = stretched.shape[1]
         distance = self._distance(stretched)
-        constant = gammaln(0.5 * (FREEDOM + dimension)) - gammaln(0.5 * FREEDOM)
-        constant -= 0.5 * dimension * np.log(FREEDOM * np.pi)
+        constant = gammaln(0.5 * (self.freedom + dimension)) - gammaln(0.5 * self.freedom)
+        constant -= 0.5 * dimension * np.log(self.freedom * np.pi)
         volume = np.log(np.diagonal(self.roots, axis1=1, axis2=2)).sum(axis=1)
-        return np.asarray(constant - volume - 0.5 * (FREEDOM + dimension) * np.log1p(distance / FREEDOM))
+        return np.asarray(constant - volume - 0.5 * (self.freedom + dimension) * np.log1p(distance / self.freedom))
 
     def _distance(self, stretched: FloatArray) -> FloatArray:
         """Squared distance ndarray[draw, component] from each centre, in its deviations."""
         white = (stretched[None] - self.centres[:, None]) @ np.swapaxes(self.inverses, 1, 2)
         return np.asarray(np.einsum("kdi,kdi->dk", white, white))
+
+
+def placed_mixture(centres: FloatArray, roots: FloatArray, share: FloatArray, freedom: float) -> Mixture:
+    """Student's t of given places, Cholesky factors, shares and freedom, without bounds."""
+    endless = np.full(centres.shape[1], np.inf)
+    return Mixture(-endless, endless, centres, roots, _inverse(roots), share, freedom)
 
 
 def fitted_mixture(draws: FloatArray, lower: FloatArray, upper: FloatArray, rng: np.random.Generator) -> Mixture:

@@ -7,7 +7,6 @@ posterior and of the prior; of those it finds, two are one here unless the poste
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import cast
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,7 +15,6 @@ from scipy.special import logsumexp
 from reduce.combine import Information
 from reduce.local_maxima import local_maxima
 from reduce.signal_shape import SignalShape, widths
-from reduce.trough_model import TroughModel
 
 FloatArray = NDArray[np.float64]
 
@@ -71,8 +69,7 @@ def posterior_modes(
     from_prior = shape.draw_prior(rng, STARTS)
     starts = np.concatenate([draws[rng.choice(len(draws), STARTS)], from_prior])
     box = shape if np.isfinite(_bound_widths(shape)).all() else _boxed(shape, np.concatenate([draws, from_prior]))
-    # The climb asks for bounds, `allowed` and spectra, which every shape has.
-    found = local_maxima(information, cast("TroughModel", box), starts)
+    found = local_maxima(information, box, starts)
     height = shape.log_probability(found.parameters, information)
     order = [int(number) for number in np.argsort(-height) if height[number] > height.max() - FORGOTTEN]
     leader = _leaders(information, shape, found.parameters, height, order)

@@ -1,4 +1,4 @@
-"""The posterior of one mock in milliseconds: importance sampling from a bank of prior draws, refined where it is thin.
+"""The posterior of one mock in tenths of a second: importance sampling from a bank of prior draws, refined where thin.
 
 The bank is drawn once, its spectra are written in the few directions that troughs have, and each mock
 costs one product of a matrix and a vector. Where too few draws carry the weight, proposals are drawn first
@@ -14,10 +14,11 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import gammaln, logsumexp
+from scipy.special import logsumexp
 
 from reduce.combine import Information
 from reduce.local_maxima import Maxima, local_maxima
+from reduce.mixture import Mixture, placed_mixture
 from reduce.trough_model import TroughModel
 
 FloatArray = NDArray[np.float64]
@@ -181,43 +182,16 @@ def _effective(log_weight: FloatArray) -> float:
     return float(weight.sum() ** 2 / (weight @ weight))
 
 
-@dataclass(frozen=True, eq=False)
-class _Mixture:
-    """Student's t about centres ndarray[centre, parameter]: roots of their covariances, and their shares."""
-
-    centres: FloatArray
-    roots: FloatArray
-    share: FloatArray
-
-    def draw(self, rng: np.random.Generator, size: int) -> FloatArray:
-        which = rng.choice(len(self.share), size, p=self.share)
-        normal = rng.standard_normal((size, self.centres.shape[1]))
-        scale = np.sqrt(FREEDOM / rng.chisquare(FREEDOM, size))[:, None]
-        return np.asarray(self.centres[which] + scale * np.einsum("dij,dj->di", self.roots[which], normal))
-
-    def log_density(self, at: FloatArray) -> FloatArray:
-        """ndarray[draw]."""
-        dimension = at.shape[1]
-        constant = gammaln(0.5 * (FREEDOM + dimension)) - gammaln(0.5 * FREEDOM)
-        constant -= 0.5 * dimension * np.log(FREEDOM * np.pi)
-        each = np.empty((len(at), len(self.share)))
-        for number, (centre, root) in enumerate(zip(self.centres, self.roots, strict=True)):
-            white = np.linalg.solve(root, (at - centre).T)
-            each[:, number] = -0.5 * (FREEDOM + dimension) * np.log1p((white**2).sum(axis=0) / FREEDOM)
-            each[:, number] -= np.log(np.abs(np.diag(root))).sum()
-        return np.asarray(logsumexp(each, axis=1, b=self.share) + constant)
-
-
-def _around_maxima(maxima: Maxima) -> _Mixture:
+def _around_maxima(maxima: Maxima) -> Mixture:
     """Shares by the height of the maxima, flattened, and some for each: the heights say little of the volumes."""
     height = np.exp(0.5 * (maxima.log_likelihood - maxima.log_likelihood[0]))
     near = maxima.log_likelihood > maxima.log_likelihood[0] - FORGOTTEN
     share = np.where(near, height + LEAST_SHARE, 0.0)
     roots = WIDENED * np.linalg.cholesky(maxima.covariance)
-    return _Mixture(maxima.parameters[near], roots[near], share[near] / share[near].sum())
+    return placed_mixture(maxima.parameters[near], roots[near], share[near] / share[near].sum(), FREEDOM)
 
 
-def _around_draws(parameters: FloatArray, weight: FloatArray, shape: TroughModel, rng: np.random.Generator) -> _Mixture:
+def _around_draws(parameters: FloatArray, weight: FloatArray, shape: TroughModel, rng: np.random.Generator) -> Mixture:
     """Centres among the draws, of one width: Silverman's for so many, of the flattened cloud's covariance."""
     dimension = parameters.shape[1]
     centres = parameters[rng.choice(len(weight), CENTRES, p=weight)]
@@ -225,11 +199,12 @@ def _around_draws(parameters: FloatArray, weight: FloatArray, shape: TroughModel
     width = (4.0 / (CENTRES * (dimension + 2.0))) ** (1.0 / (dimension + 4.0))
     floor = 1e-12 * np.diag(shape.upper - shape.lower) ** 2
     root = np.linalg.cholesky(width**2 * (off * weight[:, None]).T @ off + floor)
-    return _Mixture(centres, np.broadcast_to(root, (CENTRES, *root.shape)), np.full(CENTRES, 1.0 / CENTRES))
+    roots = np.broadcast_to(root, (CENTRES, *root.shape))
+    return placed_mixture(centres, roots, np.full(CENTRES, 1.0 / CENTRES), FREEDOM)
 
 
 def _proposed(
-    information: Information, shape: TroughModel, log_prior: float, mixture: _Mixture, rng: np.random.Generator
+    information: Information, shape: TroughModel, log_prior: float, mixture: Mixture, rng: np.random.Generator
 ) -> _Round:
     """Draws from the mixture and the prior together, weighted."""
     from_prior = shape.draw_prior(rng, int(PRIOR_SHARE * PROPOSALS))

@@ -7,8 +7,7 @@ another configuration altogether (another map, a beam from a solver). All are re
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
-from contextlib import AbstractContextManager
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -19,8 +18,8 @@ from reduce.ensemble import STREAM as ENSEMBLE_STREAM
 from reduce.ensemble import DrawnSpectra, check_campaign, drawn_spectra, redrawn, spread
 from reduce.foreground.known import KnownForeground
 from reduce.knowledge_modes import engine_runs, knowledge_modes
-from reduce.mocks import MockBench, Reduced, believed_spectra, mock_bench, reduce_all
-from reduce.redraw import Redrawer, redrawer
+from reduce.mocks import STREAM, MockBench, Reduced, believed_spectra, mock_bench, reduce_all
+from reduce.redraw import Bars, Redrawer, redrawer
 from reduce.trough_model import NAMES
 from sims.campaign import drawn_sky
 from sims.config import Config
@@ -33,9 +32,7 @@ from sims.sky_power_law import DiffuseSky
 from sims.streams import stream
 
 FloatArray = NDArray[np.float64]
-Bars = Callable[[str, int], AbstractContextManager[Callable[[int], None]]]
 
-STREAM = "trust"
 FEWEST_OUTSIDE = 50
 SHARE_OUTSIDE = 5
 MAP_ERROR = 0.05

@@ -10,11 +10,9 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from reduce.foreground.known import KnownForeground
+from reduce.foreground.known import SMALLEST_OF_NOISE, KnownForeground
 
 FloatArray = NDArray[np.float64]
-
-SMALLEST_OF_NOISE = 0.01  # a mode that nowhere rises above this part of the noise is left out
 
 
 def process_modes(

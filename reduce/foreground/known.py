@@ -16,6 +16,8 @@ from sims.errors import raise_if_any
 
 FloatArray = NDArray[np.float64]
 
+SMALLEST_OF_NOISE = 0.01  # a mode that nowhere rises above this part of the noise is left out
+
 
 @dataclass(frozen=True, eq=False)
 class KnownForeground:

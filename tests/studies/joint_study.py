@@ -22,7 +22,7 @@ from numba import set_num_threads
 from threadpoolctl import threadpool_limits
 
 from reduce.ensemble import DrawnSpectra, drawn_spectra
-from reduce.fisher import cramer_rao_sd
+from reduce.forecast import fisher_covariance
 from reduce.joint_fit import joint_fit
 from reduce.mocks import STREAM, MockBench, believed_spectra, mock_bench, mock_spectra
 from reduce.redraw import redrawer
@@ -102,7 +102,7 @@ def fit_one(bench: MockBench, terms: int | None, temperature_k: np.ndarray, resp
         truth,
         fit.posterior.mean(),
         np.sqrt(np.diag(fit.posterior.covariance())),
-        cramer_rao_sd(fit.information, bench.model, truth),
+        fisher_covariance(fit.information, bench.model, truth).sd_with_prior,
         fit.information.chi_squared_min - 2.0 * float(fit.information.log_likelihood(bench.model.signal_k(truth))),
         fit.information.rows - fit.information.nuisance_terms,
     )
